@@ -1,0 +1,1 @@
+"""Many jobs: the job file, the checks before work, the outcome."""

@@ -1,0 +1,1 @@
+"""How the two sensors relate: clock, contrast thresholds, hot pixels."""

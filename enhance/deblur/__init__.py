@@ -1,0 +1,1 @@
+"""The event double integral, for one frame or many."""

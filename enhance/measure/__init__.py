@@ -1,0 +1,1 @@
+"""Figures: PSNR, SSIM, sharpness, and the plain alternatives they are compared with."""

@@ -1,0 +1,1 @@
+"""Frames and events from files, read lazily into a recording."""

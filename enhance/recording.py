@@ -1,0 +1,301 @@
+"""What flows between the rooms: frames, events, a recording, a picture.
+
+All of it is frozen. Times are microseconds (see `enhance.clock`), images are float32 in linear light (see
+`enhance.light`), pixel centres stand at integers, arrays are indexed row, column.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+from enum import StrEnum
+from typing import Protocol
+
+import numpy as np
+from numpy.typing import NDArray
+
+from enhance.clock import middle_us
+from enhance.light import Image, Light
+
+
+class Kind(StrEnum):
+    """What a picture is; it says so wherever it goes."""
+
+    CAPTURED = "captured"
+    DEBLURRED = "deblurred"
+    INSERTED = "inserted"
+
+
+class By(StrEnum):
+    """What made a picture: the frames alone, the event integral, or the fusion network."""
+
+    FRAMES = "frames"
+    INTEGRAL = "integral"
+    NETWORK = "network"
+
+
+@dataclass(frozen=True)
+class Frame:
+    """One captured frame.
+
+    Parameters
+    ----------
+    image : ndarray of float32, shape (H, W) or (H, W, 3)
+        Linear light, 1 = full scale; colour is R, G, B.
+    start_us, end_us : int
+        Exposure of row 0. Equal for a frame that counts as sharp.
+    row_time_us : float
+        Row r is exposed ``row_time_us * r`` later; 0 for a global shutter.
+    """
+
+    image: Image
+    start_us: int
+    end_us: int
+    row_time_us: float = 0.0
+
+    @property
+    def time_us(self) -> int:
+        """Middle of the middle row's exposure."""
+        shift = int(self.row_time_us * (self.image.shape[0] // 2) // 1)
+        return middle_us(self.start_us, self.end_us) + shift
+
+    @property
+    def exposure_us(self) -> int:
+        """Length of one row's exposure."""
+        return self.end_us - self.start_us
+
+
+@dataclass(frozen=True)
+class Events:
+    """Events as columns, sorted by time, ties in file order.
+
+    Parameters
+    ----------
+    t_us : ndarray of int64, shape (N,)
+    x, y : ndarray of uint16, shape (N,)
+        Column and row.
+    polarity : ndarray of int8, shape (N,)
+        +1 brighter, -1 darker.
+    """
+
+    t_us: NDArray[np.int64]
+    x: NDArray[np.uint16]
+    y: NDArray[np.uint16]
+    polarity: NDArray[np.int8]
+
+    def __len__(self) -> int:
+        return len(self.t_us)
+
+    def between(self, start_us: int, end_us: int) -> Events:
+        """Events of ``[start_us, end_us)``, as views."""
+        first, last = np.searchsorted(self.t_us, [start_us, end_us])
+        return self.keep(slice(int(first), int(last)))
+
+    def keep(self, chosen: slice | NDArray[np.bool_]) -> Events:
+        """Events picked by a slice or a mask, shape (N,)."""
+        return Events(self.t_us[chosen], self.x[chosen], self.y[chosen], self.polarity[chosen])
+
+    @staticmethod
+    def none() -> Events:
+        """No events."""
+        return Events(np.empty(0, np.int64), np.empty(0, np.uint16), np.empty(0, np.uint16), np.empty(0, np.int8))
+
+
+class FrameSource(Protocol):
+    """Frames of a recording, decoded one at a time.
+
+    The table is known without decoding a picture: `start_us`, `end_us` (int64, shape (K,), strictly rising starts,
+    end >= start) and `gain` (float64, shape (K,), 1 where none is given). `notes` lists counted corrections in words.
+    """
+
+    start_us: NDArray[np.int64]
+    end_us: NDArray[np.int64]
+    gain: NDArray[np.float64]
+    names: Sequence[str]
+    shape: tuple[int, ...]
+    full_size: tuple[int, int]  # width, height before the crop
+    crop_origin: tuple[int, int]  # x, y of the crop's corner in the whole frame
+    light: Light
+    notes: Sequence[str]
+
+    def __len__(self) -> int:
+        """Count the frames."""
+        ...
+
+    def frame(self, index: int) -> Frame:
+        """Decode one frame into linear light."""
+        ...
+
+    def close(self) -> None:
+        """Release the file."""
+        ...
+
+
+class EventSource(Protocol):
+    """Events of a recording, read by time window: memory follows the window, never the file.
+
+    `size` is (width, height) of the sensor; `count` the number of usable events; `first_us` and `last_us` the first
+    and the last event's time; ``[cover_start_us, cover_end_us)`` when the sensor was really recording. `notes` lists
+    counted corrections in words.
+    """
+
+    size: tuple[int, int]
+    count: int
+    first_us: int
+    last_us: int
+    cover_start_us: int
+    cover_end_us: int
+    notes: Sequence[str]
+
+    def between(self, start_us: int, end_us: int) -> Events:
+        """Events of ``[start_us, end_us)``."""
+        ...
+
+    def count_between(self, start_us: int, end_us: int) -> int:
+        """About how many events lie in ``[start_us, end_us)``, without reading them: for plans, never for results."""
+        ...
+
+    def close(self) -> None:
+        """Release the file."""
+        ...
+
+
+@dataclass(frozen=True)
+class EventArray:
+    """An `EventSource` over events that are in memory already: for simulated recordings and tests.
+
+    Parameters
+    ----------
+    events : Events
+    size : tuple of int
+        Width, height.
+    cover : tuple of int, optional
+        When the sensor was recording; first to last event if left out.
+    """
+
+    events: Events
+    size: tuple[int, int]
+    cover: tuple[int, int] | None = None
+    notes: Sequence[str] = ()
+
+    @property
+    def count(self) -> int:
+        """Number of events."""
+        return len(self.events)
+
+    @property
+    def first_us(self) -> int:
+        """Time of the first event."""
+        return int(self.events.t_us[0])
+
+    @property
+    def last_us(self) -> int:
+        """Time of the last event."""
+        return int(self.events.t_us[-1])
+
+    @property
+    def cover_start_us(self) -> int:
+        """When the sensor began to record."""
+        return self.cover[0] if self.cover else self.first_us
+
+    @property
+    def cover_end_us(self) -> int:
+        """When the sensor ceased to record."""
+        return self.cover[1] if self.cover else self.last_us + 1
+
+    def between(self, start_us: int, end_us: int) -> Events:
+        """Events of ``[start_us, end_us)``."""
+        return self.events.between(start_us, end_us)
+
+    def count_between(self, start_us: int, end_us: int) -> int:
+        """How many events lie in ``[start_us, end_us)``."""
+        return len(self.between(start_us, end_us))
+
+    def close(self) -> None:
+        """Nothing to release."""
+
+
+@dataclass(frozen=True)
+class FrameArray:
+    """A `FrameSource` over frames that are in memory already: for simulated recordings and tests.
+
+    Parameters
+    ----------
+    codes : ndarray, shape (K, H, W) or (K, H, W, 3)
+        Code values as a camera would store them.
+    start_us, end_us : ndarray of int64, shape (K,)
+    light : Light
+    """
+
+    codes: NDArray[np.generic]
+    start_us: NDArray[np.int64]
+    end_us: NDArray[np.int64]
+    light: Light
+    notes: Sequence[str] = ()
+
+    @property
+    def gain(self) -> NDArray[np.float64]:
+        """1 for every frame."""
+        return np.ones(len(self.codes))
+
+    @property
+    def names(self) -> Sequence[str]:
+        """Indices as text."""
+        return [str(i) for i in range(len(self.codes))]
+
+    @property
+    def shape(self) -> tuple[int, ...]:
+        """Shape of one frame."""
+        return self.codes.shape[1:]
+
+    @property
+    def full_size(self) -> tuple[int, int]:
+        """Width, height."""
+        return self.codes.shape[2], self.codes.shape[1]
+
+    @property
+    def crop_origin(self) -> tuple[int, int]:
+        """Nothing is cropped."""
+        return 0, 0
+
+    def __len__(self) -> int:
+        return len(self.codes)
+
+    def frame(self, index: int) -> Frame:
+        """One frame in linear light."""
+        return Frame(self.light.to_linear(self.codes[index]), int(self.start_us[index]), int(self.end_us[index]))
+
+    def close(self) -> None:
+        """Nothing to release."""
+
+
+@dataclass(frozen=True)
+class Recording:
+    """Frames and events of one scene, each in its own world; a `Rig` says how the two relate."""
+
+    title: str
+    frames: FrameSource
+    events: EventSource
+
+
+@dataclass(frozen=True)
+class Picture:
+    """One picture that leaves the tool.
+
+    Parameters
+    ----------
+    image : ndarray of float32, shape (H, W) or (H, W, 3)
+        Linear light.
+    time_us : int
+        Its instant of the scene.
+    kind : Kind
+    by : By
+    expected_psnr : float or None
+        dB against the sharp truth; None where it is not known.
+    """
+
+    image: Image
+    time_us: int
+    kind: Kind
+    by: By
+    expected_psnr: float | None = None

@@ -1,0 +1,1 @@
+"""Scene, frame camera and event sensor: recordings whose truth is known."""

@@ -1,0 +1,1 @@
+"""Fits the fusion network on simulated recordings."""

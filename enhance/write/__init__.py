@@ -1,0 +1,1 @@
+"""Video, stills, tables and records; each file appears whole or not at all."""
