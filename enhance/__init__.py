@@ -16,14 +16,15 @@ The map, in the order of the flow::
     clip.py       one recording through the rooms: the only file that knows their order
     recording.py  what flows: frames, events, a recording, a picture
     rig.py        how the two sensors relate
+    settings.py   what a job asks for
     clock.py      what time is
     light.py      what light is
     shipped.py    where the files that travel with the package lie
     errors.py     what can go wrong
     cli.py        the command line; the only file that prints and exits
 
-Imports point one way: errors < clock, light, shipped < recording < rig, kernels < the rooms (blind to each other) <
-clip < batch, train < cli.
+Imports point one way: errors < clock, light, shipped < recording, settings < rig, kernels < the rooms (blind to each
+other) < clip < batch, train < cli.
 """
 
 __version__ = "0.1.0"
