@@ -1,6 +1,7 @@
 import numpy as np
 
-from enhance.deblur.integral import deblur, log_blur_ratio, log_sum
+from enhance.deblur.integral import deblur
+from enhance.kernels.double_integral import log_blur_ratio, log_sum
 from enhance.recording import Events
 
 
