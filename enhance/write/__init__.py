@@ -1,1 +1,20 @@
 """Video, stills, tables and records; each file appears whole or not at all."""
+
+from enhance.write import cautions
+from enhance.write.stills import write_still
+from enhance.write.strip import caption_line
+from enhance.write.tables import write_json, write_table, write_text
+from enhance.write.video import ClipWriter
+from enhance.write.whole import probe_folder, whole_file
+
+__all__ = [
+    "ClipWriter",
+    "caption_line",
+    "cautions",
+    "probe_folder",
+    "whole_file",
+    "write_json",
+    "write_still",
+    "write_table",
+    "write_text",
+]
