@@ -8,6 +8,7 @@
     │   ├── FramesError                  frames, their times, or a video
     │   └── EventsError                  an event file
     ├── CalibrationError  (ValueError)   the relation of the two sensors cannot be told, or a rig file does not fit
+    ├── MeasureError      (ValueError)   two pictures cannot be compared, or a picture holds nothing to measure
     ├── ModelError        (OSError)      a weights file is missing, damaged or not ours
     ├── WriteError        (OSError)      an output cannot be written
     └── PackageError      (ImportError)  an optional package is not installed
@@ -55,6 +56,10 @@ class EventsError(ReadError):
 
 class CalibrationError(EnhanceError, ValueError):
     """The relation of the two sensors cannot be told, or a rig file does not fit."""
+
+
+class MeasureError(EnhanceError, ValueError):
+    """Two pictures cannot be compared, or a picture holds nothing to measure."""
 
 
 class ModelError(EnhanceError, OSError):
