@@ -1,0 +1,208 @@
+"""Mistakes that need two keys, or the disk, to be seen: settled before anything is written.
+
+They are read from the file as it stands, not from the validated settings, so that one wrong value does not hide the
+next mistake. A value of the wrong kind is passed over here; the schema reports it.
+"""
+
+from __future__ import annotations
+
+import os
+from collections.abc import Iterator, Mapping
+from pathlib import Path
+from typing import Any
+
+from enhance.batch.lines import KeyPath
+from enhance.batch.mistakes import nearest
+from enhance.batch.schema import duration
+
+Mistake = tuple[KeyPath, str]
+Document = Mapping[str, Any]
+
+#: Keys that name an input.
+INPUTS: tuple[tuple[str, str], ...] = (
+    ("frames", "source"),
+    ("frames", "times"),
+    ("events", "source"),
+    ("rig", "file"),
+)
+
+
+def mistakes_of_keys(document: Document) -> list[Mistake]:
+    """Find keys that contradict each other.
+
+    Parameters
+    ----------
+    document : mapping
+        The job file as parsed.
+
+    Returns
+    -------
+    list of (key path, message)
+    """
+    return [each for check in (_light, _cover, _grid, _windows, _hold_out) for each in check(document)]
+
+
+def mistakes_of_files(document: Document, job: Path) -> list[Mistake]:
+    """Find inputs that are not there and an output folder that must not be written to.
+
+    Parameters
+    ----------
+    document : mapping
+        The job file as parsed.
+    job : Path
+        The job file; paths are relative to its folder.
+
+    Returns
+    -------
+    list of (key path, message)
+    """
+    return [*_inputs(document, job.parent), *_images(document, job.parent), *_output(document, job)]
+
+
+def _get(document: Document, table: str, key: str, kind: type | tuple[type, ...]) -> Any:
+    """Return a value, or None where it is missing or of another kind."""
+    tables = document.get(table)
+    value = tables.get(key) if isinstance(tables, Mapping) else None
+    return value if isinstance(value, kind) and not isinstance(value, bool) else None
+
+
+def _light(document: Document) -> Iterator[Mistake]:
+    black, white = (_get(document, "frames", key, (int, float)) for key in ("black", "white"))
+    if white is not None and not white > (black or 0):
+        yield (
+            ("frames", "white"),
+            f"found {white}; full scale must be above black, which is {black or 0}. Write 255 for 8 bit frames, "
+            f"65535 for 16 bit",
+        )
+
+
+def _cover(document: Document) -> Iterator[Mistake]:
+    cover = _get(document, "events", "cover", list)
+    times = _times(cover) if cover else None
+    if times and len(times) == 2 and times[0] >= times[1]:
+        yield ("events", "cover"), f"found {cover}; the end must be after the start"
+
+
+def _grid(document: Document) -> Iterator[Mistake]:
+    table = document.get("slow_motion")
+    if not isinstance(table, Mapping) or "scene_rate" not in table:
+        return
+    if "factor" in table:
+        yield (
+            ("slow_motion", "scene_rate"),
+            "factor and scene_rate both say how many pictures are made; keep one and leave the other out",
+        )
+    for i, window in enumerate(_get(document, "slow_motion", "windows", list) or []):
+        if isinstance(window, Mapping) and "factor" in window:
+            yield (
+                ("slow_motion", "windows", i, "factor"),
+                "a window's own factor does not go with scene_rate; leave one of them out",
+            )
+
+
+def _windows(document: Document) -> Iterator[Mistake]:
+    windows = _get(document, "slow_motion", "windows", list) or []
+    good: list[tuple[int, int, int]] = []
+    for i, window in enumerate(windows):
+        times = _times([window.get("from"), window.get("to")]) if isinstance(window, Mapping) else None
+        if times is None:
+            continue
+        if times[0] >= times[1]:
+            yield (
+                ("slow_motion", "windows", i),
+                f'from "{window["from"]}" to "{window["to"]}" has no length; to must be after from',
+            )
+        else:
+            good.append((times[0], times[1], i))
+    good.sort()
+    for (_, end, first), (start, _, second) in zip(good, good[1:], strict=False):
+        if start < end:
+            yield (
+                ("slow_motion", "windows", second),
+                f'starts at "{windows[second]["from"]}", before the window that ends at "{windows[first]["to"]}" is '
+                f"over; windows must not overlap",
+            )
+
+
+def _hold_out(document: Document) -> Iterator[Mistake]:
+    if _get(document, "measure", "hold_out", int) == 1:
+        yield (
+            ("measure", "hold_out"),
+            "found 1; every frame would be used and none be left to compare with. Write 2 or more, or 0 for none",
+        )
+
+
+def _times(values: list[Any]) -> list[int] | None:
+    try:
+        return [duration(value) for value in values]
+    except ValueError:
+        return None  # the schema reports it
+
+
+def _inputs(document: Document, folder: Path) -> Iterator[Mistake]:
+    for table, key in INPUTS:
+        given = _get(document, table, key, str)
+        if not given or (folder / given).is_file():
+            continue
+        path = folder / given
+        if path.is_dir():
+            if (table, key) != ("frames", "source"):
+                yield (table, key), f"{path} is a folder; expected a file"
+        else:
+            yield (table, key), f"{path} does not exist; paths are relative to the job file's folder{_neighbour(path)}"
+
+
+def _neighbour(path: Path) -> str:
+    """Name the entry of the same folder that was probably meant, or the first folder on the way that is missing."""
+    if not path.parent.is_dir():
+        return f". Nor does the folder {path.parent}"
+    close = nearest(path.name, sorted(os.listdir(path.parent))[:10_000])
+    return f". Did you mean {close}?" if close else ""
+
+
+def _images(document: Document, folder: Path) -> Iterator[Mistake]:
+    """Find what a folder of images cannot say by itself: when they were taken, what their code values mean."""
+    given = _get(document, "frames", "source", str)
+    if not given or not (folder / given).is_dir():
+        return
+    table = document["frames"]
+    if "times" not in table:
+        yield ("frames", "times"), "is missing; images do not say when they were taken: name a table of their times"
+    if "light_curve" not in table:
+        yield (
+            ("frames", "light_curve"),
+            'is missing; images do not say what their code values mean: write "linear", "srgb", "bt709" or "gamma 2.2"',
+        )
+
+
+def _output(document: Document, job: Path) -> Iterator[Mistake]:
+    given = _get(document, "output", "folder", str)
+    if not given:
+        return
+    output = (job.parent / given).resolve()
+    if output.exists() and not output.is_dir():
+        yield ("output", "folder"), f"{job.parent / given} is a file; expected a folder, which need not exist"
+        return
+    parent = next(above for above in (output, *output.parents) if above.exists())
+    if not os.access(parent, os.W_OK):
+        yield ("output", "folder"), f"{job.parent / given} cannot be written to; choose another folder"
+    held = [name for name, path in _held(document, job) if path == output or output in path.parents]
+    if held:
+        yield (
+            ("output", "folder"),
+            f"{job.parent / given} holds inputs ({', '.join(held)}); results must not mix with them: choose a folder "
+            f"of their own",
+        )
+        return
+    frames = _get(document, "frames", "source", str)
+    source = (job.parent / frames).resolve() if frames else None
+    if source and source.is_dir() and source in output.parents:
+        yield ("output", "folder"), f"{job.parent / given} lies inside frames.source; choose a folder outside it"
+
+
+def _held(document: Document, job: Path) -> Iterator[tuple[str, Path]]:
+    yield "the job file", job.resolve()
+    for table, key in INPUTS:
+        given = _get(document, table, key, str)
+        if given:
+            yield f"{table}.{key}", (job.parent / given).resolve()
