@@ -57,7 +57,8 @@ def flow_between(a_linear: Image, b_linear: Image, preset: str = "medium") -> ND
     margin = ((0, max(0, _SMALLEST_SIDE - height)), (0, max(0, _SMALLEST_SIDE - width)))
     method = cv2.DISOpticalFlow.create(_PRESETS[preset])
     a, b = np.pad(a, margin, mode="edge"), np.pad(b, margin, mode="edge")
-    flow = method.calc(a, b, np.zeros((*a.shape, 2), np.float32))
+    # None, which the published types forget: an array of zeros would count as a first guess and change the result.
+    flow = method.calc(a, b, None)  # type: ignore[call-overload]
     return np.ascontiguousarray(flow[:height, :width], dtype=np.float32)
 
 
