@@ -108,15 +108,50 @@ class FrameSource(Protocol):
     end >= start) and `gain` (float64, shape (K,), 1 where none is given). `notes` lists counted corrections in words.
     """
 
-    start_us: NDArray[np.int64]
-    end_us: NDArray[np.int64]
-    gain: NDArray[np.float64]
-    names: Sequence[str]
-    shape: tuple[int, ...]
-    full_size: tuple[int, int]  # width, height before the crop
-    crop_origin: tuple[int, int]  # x, y of the crop's corner in the whole frame
-    light: Light
-    notes: Sequence[str]
+    @property
+    def start_us(self) -> NDArray[np.int64]:
+        """Starts of the exposures, shape (K,)."""
+        ...
+
+    @property
+    def end_us(self) -> NDArray[np.int64]:
+        """Ends of the exposures, shape (K,)."""
+        ...
+
+    @property
+    def gain(self) -> NDArray[np.float64]:
+        """Gain of each frame, shape (K,)."""
+        ...
+
+    @property
+    def names(self) -> Sequence[str]:
+        """What each frame is called in its source."""
+        ...
+
+    @property
+    def shape(self) -> tuple[int, ...]:
+        """Shape of one frame."""
+        ...
+
+    @property
+    def full_size(self) -> tuple[int, int]:
+        """Width, height before the crop."""
+        ...
+
+    @property
+    def crop_origin(self) -> tuple[int, int]:
+        """Corner (x, y) of the crop in the whole frame."""
+        ...
+
+    @property
+    def light(self) -> Light:
+        """The frames' own curve."""
+        ...
+
+    @property
+    def notes(self) -> Sequence[str]:
+        """Counted corrections in words."""
+        ...
 
     def __len__(self) -> int:
         """Count the frames."""
@@ -139,13 +174,40 @@ class EventSource(Protocol):
     counted corrections in words.
     """
 
-    size: tuple[int, int]
-    count: int
-    first_us: int
-    last_us: int
-    cover_start_us: int
-    cover_end_us: int
-    notes: Sequence[str]
+    @property
+    def size(self) -> tuple[int, int]:
+        """Width, height of the sensor."""
+        ...
+
+    @property
+    def count(self) -> int:
+        """Number of usable events."""
+        ...
+
+    @property
+    def first_us(self) -> int:
+        """Time of the first event."""
+        ...
+
+    @property
+    def last_us(self) -> int:
+        """Time of the last event."""
+        ...
+
+    @property
+    def cover_start_us(self) -> int:
+        """When the sensor began to record."""
+        ...
+
+    @property
+    def cover_end_us(self) -> int:
+        """When the sensor ceased to record."""
+        ...
+
+    @property
+    def notes(self) -> Sequence[str]:
+        """Counted corrections in words."""
+        ...
 
     def between(self, start_us: int, end_us: int) -> Events:
         """Events of ``[start_us, end_us)``."""
