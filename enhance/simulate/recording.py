@@ -1,0 +1,187 @@
+"""One scene through both instruments at once: a recording, and the truth behind it."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from enhance.clock import ClockMap
+from enhance.light import Image
+from enhance.recording import EventArray, Events, FrameArray, Recording
+from enhance.simulate.camera import Camera
+from enhance.simulate.scene import Scene
+from enhance.simulate.sensor import EventSensor, SensorRun
+
+#: Motion between two pictures the instruments are shown, pixels; log light in between is taken as straight.
+STEP_PX = 0.35
+
+#: Pictures a cycle of a flickering lamp.
+STEPS_A_CYCLE = 48
+
+
+@dataclass(frozen=True)
+class Simulated:
+    """A simulated recording with everything that a real one hides.
+
+    Parameters
+    ----------
+    recording : Recording
+        Frames in the frame clock, events in the event clock.
+    scene : Scene
+    camera : Camera
+    sensor : EventSensor
+    clock : ClockMap
+        The true map from event time to frame time.
+    contrast_positive, contrast_negative : ndarray of float64, shape (H, W)
+        Each pixel's own thresholds.
+    hot : ndarray of int64, shape (N, 2)
+        Column and row of the hot pixels.
+    seed : int
+    duration_us : int
+        The scene ran over ``[0, duration)`` of the frame clock.
+    """
+
+    recording: Recording
+    scene: Scene
+    camera: Camera
+    sensor: EventSensor
+    clock: ClockMap
+    contrast_positive: NDArray[np.float64]
+    contrast_negative: NDArray[np.float64]
+    hot: NDArray[np.int64]
+    seed: int
+    duration_us: int
+
+    def truth(self, t_us: float) -> Image:
+        """Sharp, noise-free linear image at a time of the frame clock, under steady light; (H, W) or (H, W, 3)."""
+        return self.scene.render(t_us * 1e-6)
+
+
+def simulate(
+    scene: Scene,
+    camera: Camera,
+    sensor: EventSensor,
+    duration_s: float,
+    seed: int,
+    clock_offset_us: int = 0,
+    drift_ppm: float = 0.0,
+    title: str = "",
+) -> Simulated:
+    """Record a scene with a frame camera and an event sensor that share one view.
+
+    Memory holds one picture, one frame and the events; each picture is drawn once and shown to both instruments.
+
+    Parameters
+    ----------
+    scene : Scene
+    camera : Camera
+    sensor : EventSensor
+    duration_s : float
+        The scene runs over ``[0, duration)``, which the event sensor covers; frames are those whose exposure fits.
+    seed : int
+        Of all noise, thresholds and part-filled references.
+    clock_offset_us, drift_ppm : int, float
+        ``t_frame = t_event + offset + 1e-6 * drift * (t_event - t_first_event)``.
+    title : str
+        The scene's name if left out.
+
+    Returns
+    -------
+    Simulated
+
+    Raises
+    ------
+    ValueError
+        If no whole exposure fits into the duration.
+    """
+    camera_rng, sensor_rng = np.random.default_rng(seed).spawn(2)
+    duration_us = round(duration_s * 1e6)
+    starts, ends = camera.exposures(duration_us)
+    if not len(starts):
+        raise ValueError(
+            f"a duration of {duration_us} us holds no exposure of {camera.exposure_us} us "
+            f"that starts at {camera.start_us} us; expected a longer one"
+        )
+    run = SensorRun(sensor, scene.size, sensor_rng)
+    codes: list[NDArray[np.generic]] = []
+    kept: list[Events] = []
+    exposed, count = np.zeros(1), 0
+    for time_us, frame, samples in _instants(scene, camera, sensor, duration_us):
+        steady = scene.render(time_us * 1e-6)
+        lit = steady * np.float32(sensor.lamp(time_us * 1e-6)) if sensor.lamp_depth else steady
+        kept.append(run.advance(lit, time_us))
+        if frame < 0:
+            continue
+        seen = lit if camera.sees_lamp else steady
+        # midpoint rule in linear light, summed in float64
+        exposed, count = (exposed + seen, count + 1) if count else (seen.astype(np.float64), 1)
+        if count == samples:
+            codes.append(camera.capture((exposed / count).astype(np.float32), camera_rng))
+            count = 0
+    events, clock, cover = _into_event_clock(_joined(kept), duration_us, clock_offset_us, drift_ppm)
+    frames = FrameArray(np.stack(codes), starts, ends, camera.light)
+    return Simulated(
+        Recording(title or scene.name, frames, EventArray(events, scene.size, cover)),
+        scene,
+        camera,
+        sensor,
+        clock,
+        run.contrast_positive,
+        run.contrast_negative,
+        run.hot,
+        seed,
+        duration_us,
+    )
+
+
+def _instants(scene: Scene, camera: Camera, sensor: EventSensor, duration_us: int) -> Iterator[tuple[float, int, int]]:
+    """Instants at which the scene is drawn, with the frame each is part of (-1: none) and that frame's count.
+
+    Exposures are divided into equal parts, each shown by its middle; the gaps are filled with steps no longer.
+    """
+    longest = 1e6 * STEP_PX / max(scene.speed_px_s, 1.0)
+    if sensor.lamp_depth:
+        longest = min(longest, 1e6 / sensor.lamp_hz / STEPS_A_CYCLE)
+    samples = max(5, int(np.ceil(camera.exposure_us / longest)))
+    step = camera.exposure_us / samples
+    yield 0.0, -1, 0
+    last = 0.0
+    for frame, start in enumerate(camera.exposures(duration_us)[0]):
+        yield from ((t, -1, 0) for t in _filled(last, start + 0.5 * step, longest))
+        for k in range(samples):
+            last = start + (k + 0.5) * step
+            yield last, frame, samples
+    yield from ((t, -1, 0) for t in _filled(last, float(duration_us), longest))
+    if last < duration_us:
+        yield float(duration_us), -1, 0
+
+
+def _filled(start: float, end: float, longest: float) -> NDArray[np.float64]:
+    """Instants strictly between two that leave no step over `longest`."""
+    return np.linspace(start, end, int(np.ceil((end - start) / longest)) + 1)[1:-1]
+
+
+def _joined(kept: list[Events]) -> Events:
+    """All steps' events as one table, sorted by time (a latency that varies may have crossed the steps)."""
+    t = np.concatenate([events.t_us for events in kept])
+    columns = [np.concatenate([getattr(events, name) for events in kept]) for name in ("x", "y", "polarity")]
+    if len(t) > 1 and (np.diff(t) < 0).any():
+        order = np.argsort(t, kind="stable")
+        t, columns = t[order], [column[order] for column in columns]
+    return Events(t, *columns)
+
+
+def _into_event_clock(
+    events: Events, duration_us: int, offset_us: int, drift_ppm: float
+) -> tuple[Events, ClockMap, tuple[int, int]]:
+    """Turn frame times into event times, so that the clock's own formula leads back; and the cover with them."""
+    first = int(events.t_us[0]) if len(events) else 0
+    clock = ClockMap(offset_us, drift_ppm, first - offset_us)
+    edges = np.array([0, duration_us], dtype=np.int64)
+    # t_event = t_first + (t_frame - t_frame_first) / (1 + 1e-6 drift), and t_first = t_frame_first - offset
+    stretch = 1.0 / (1.0 + 1e-6 * drift_ppm)
+    moved, cover = (np.rint((t - first) * stretch).astype(np.int64) + first - offset_us for t in (events.t_us, edges))
+    return Events(moved, events.x, events.y, events.polarity), clock, (int(cover[0]), int(cover[1]))
