@@ -63,8 +63,10 @@ def edge_sfr(crop: NDArray[np.generic]) -> tuple[NDArray[np.float64], NDArray[np
     # Hamming window around the edge, so that noise far from it does not add up
     distance = profile.position_px[1:-1]
     line = line * (0.54 + 0.46 * np.cos(np.pi * distance / np.abs(distance).max()))
-    spectrum = np.abs(np.fft.rfft(line))
-    frequency = np.asarray(np.fft.rfftfreq(line.size, d=1.0 / _BINS), dtype=np.float64)
+    # zeros behind it only sample the same response more finely, so that its zeros and its half lie near a value
+    length = 4 * line.size
+    spectrum = np.abs(np.fft.rfft(line, length))
+    frequency = np.asarray(np.fft.rfftfreq(length, d=1.0 / _BINS), dtype=np.float64)
     kept = frequency <= 1.0
     # a central difference over 2 / _BINS pixel passes sinc(2 f / _BINS) of a frequency
     passed = np.sinc(2.0 * frequency[kept] / _BINS)

@@ -50,7 +50,9 @@ def test_the_strip_stands_below_the_picture_and_never_on_it(tmp_path: Path, suff
     grey = {}
     for name in ("plain", "strip"):
         with av.open(str(tmp_path / f"{name}{suffix}")) as container:
-            grey[name] = next(container.decode(video=0)).to_ndarray(format="gray16le").astype(int) / 65535
+            # one thread: with more, this conversion leaves some rows unfilled now and then
+            frame = next(container.decode(video=0)).reformat(format="gray16le", threads=1)
+            grey[name] = frame.to_ndarray().astype(int) / 65535
     height, width = shape[:2]
     even = 2 if codec == "h264" else 1
     assert grey["strip"].shape[0] == -(-(height + strip_rows(width)) // even) * even
