@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections import Counter
-from collections.abc import Mapping
+from collections.abc import Iterator, Mapping
 from dataclasses import dataclass, field
 from enum import StrEnum
 from pathlib import Path
@@ -57,13 +57,29 @@ class JobReport:
     counts: Mapping[str, int] = field(default_factory=dict)
     seconds: float = 0.0
 
-    @property
-    def line(self) -> str:
-        """The job in one line, without reasons and cautions."""
-        took = f" in {duration_text(self.seconds)}" if self.seconds else ""
+    def text(self, with_facts: bool = False) -> str:
+        """How the job ended: one line, and below it facts where wanted, reasons and cautions."""
+        done = self.outcome is Outcome.DONE
+        took = f" in {duration_text(self.seconds)}" if self.seconds and self.outcome is not Outcome.REFUSED else ""
         counted = ", ".join(f"{count} {what}" for what, count in self.counts.items() if count)
-        where = f" -> {self.folder}" if self.folder and self.outcome is Outcome.DONE else ""
-        return f"{self.path}: {self.outcome}{took}{': ' + counted if counted else ''}{where}"
+        where = f" -> {self.folder}" if self.folder and done else ""
+        line = f"{self.path}: {self.outcome}{took}{': ' + counted if counted else ''}{where}"
+        return "\n".join([line, *self._below(with_facts)])
+
+    @property
+    def check_text(self) -> str:
+        """What the check found: one line, and below it facts, reasons and cautions."""
+        if self.outcome is Outcome.REFUSED:
+            line = f"{self.path}: would fail"
+        else:
+            line = f"{self.path}: would run, in about {duration_text(self.seconds)} -> {self.folder}"
+        return "\n".join([line, *self._below(with_facts=True)])
+
+    def _below(self, with_facts: bool) -> Iterator[str]:
+        if with_facts:
+            yield from (f"  {fact}" for fact in self.facts)
+        yield from (f"  - {reason}" for reason in self.reasons)
+        yield from (f"  caution: {caution}" for caution in self.cautions)
 
 
 @dataclass(frozen=True)
