@@ -42,7 +42,7 @@ def open_events(settings: EventsSettings, frame_size: tuple[int, int]) -> EventS
     """Open an event file for reading by time window.
 
     The file is streamed through once: every event is checked, and a time index is built. Containers that cannot be read
-    from the middle are copied on the way into a private temporary folder, which is removed on `close` or at exit.
+    from the middle are copied on the way into nameless temporary files, which vanish with `close` or with the process.
 
     Parameters
     ----------

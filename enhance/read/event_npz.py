@@ -81,9 +81,9 @@ class NpzEvents:
                 for first in range(0, self.count, _BLOCK):
                     rows = min(_BLOCK, self.count - first)
                     yield self._raw([_take(s, m, rows) for s, m in zip(streams, self._members, strict=True)])
+        except EventsError:
+            raise
         except _DAMAGE as error:
-            if isinstance(error, EventsError):
-                raise
             raise _damaged(self.path, error) from error
 
     def _raw(self, parts: list[NDArray[Any]]) -> Raw:

@@ -63,9 +63,9 @@ class ParquetEvents:
                 for batch in file.iter_batches(batch_size=_BLOCK, columns=self._names, use_threads=False):
                     # An absent value becomes NaN, which the door counts and drops.
                     yield Raw(*(batch.column(name).to_numpy(zero_copy_only=False) for name in self._names))
+        except EventsError:
+            raise
         except self._damage as error:
-            if isinstance(error, EventsError):
-                raise
             raise self._damaged(error) from error
 
     def _damaged(self, error: BaseException) -> EventsError:

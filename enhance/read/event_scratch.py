@@ -1,4 +1,4 @@
-"""Events in plain column files inside a private temporary folder: random access for containers that have none."""
+"""Events in plain column files in a temporary place: random access for containers that have none."""
 
 from __future__ import annotations
 
@@ -7,7 +7,7 @@ import shutil
 import tempfile
 import weakref
 from pathlib import Path
-from typing import Any, BinaryIO
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -27,7 +27,7 @@ EVENT_BYTES = sum(dtype.itemsize for dtype in _COLUMNS.values())
 
 
 class ScratchColumns:
-    """A row store on disk; the folder goes with `close`, with the object, or at exit.
+    """A row store on disk, in files without a name: whatever ends the process, nothing is left behind.
 
     Parameters
     ----------
@@ -44,14 +44,12 @@ class ScratchColumns:
 
     def __init__(self, source: Path, expected_bytes: int) -> None:
         self.source = source
-        parent = Path(tempfile.gettempdir())
-        free = shutil.disk_usage(parent).free
+        self._folder = tempfile.gettempdir()
+        free = shutil.disk_usage(self._folder).free
         if expected_bytes > free:
-            raise self._full(parent, f"needs about {expected_bytes:,} bytes there and {free:,} are free")
-        self._folder = Path(tempfile.mkdtemp(prefix="enhance-events-", dir=parent))
-        # A forked worker inherits the object but not the folder: only the process that made it may remove it.
-        self._remove = weakref.finalize(self, _remove, self._folder, os.getpid())
-        self._files: dict[str, BinaryIO] = {name: (self._folder / name).open("w+b") for name in _COLUMNS}
+            raise self._full(f"needs about {expected_bytes:,} bytes there and {free:,} are free")
+        self._files: dict[str, int] = {name: _nameless_file() for name in _COLUMNS}
+        self._release = weakref.finalize(self, _close_all, tuple(self._files.values()))
 
     def append(self, events: Events) -> None:
         """Add rows at the end.
@@ -63,23 +61,11 @@ class ScratchColumns:
         """
         try:
             for name, file in self._files.items():
-                file.write(np.ascontiguousarray(getattr(events, name), dtype=_COLUMNS[name]).data)
+                data = np.ascontiguousarray(getattr(events, name), dtype=_COLUMNS[name]).view(np.uint8).data
+                while len(data):
+                    data = data[os.write(file, data) :]
         except OSError as error:
-            raise self._full(self._folder.parent, f"could not be written ({error.strerror})") from error
-
-    def finish(self) -> None:
-        """Call once after the last row was added.
-
-        Raises
-        ------
-        EventsError
-            If the disk is full.
-        """
-        try:
-            for file in self._files.values():
-                file.flush()
-        except OSError as error:
-            raise self._full(self._folder.parent, f"could not be written ({error.strerror})") from error
+            raise self._full(f"could not be written ({error.strerror})") from error
 
     def times(self, first: int, last: int) -> NDArray[np.int64]:
         """Read the times of rows ``first .. last - 1``."""
@@ -90,10 +76,9 @@ class ScratchColumns:
         return Events(*(self._read(name, first, last) for name in _COLUMNS))
 
     def close(self) -> None:
-        """Close the files and remove the folder."""
-        for file in self._files.values():
-            file.close()
-        self._remove()
+        """Close the files, and thereby remove them."""
+        self._files = {}
+        self._release()
 
     def _read(self, name: str, first: int, last: int) -> NDArray[Any]:
         # Reading instead of mapping keeps the process's memory at the window: mapped pages count as its own.
@@ -103,7 +88,7 @@ class ScratchColumns:
         got = 0
         while got < len(wanted):
             # preadv leaves the shared file position alone, so threads may read side by side.
-            step = os.preadv(self._files[name].fileno(), [wanted[got:]], first * dtype.itemsize + got)
+            step = os.preadv(self._files[name], [wanted[got:]], first * dtype.itemsize + got)
             if step == 0:
                 raise EventsError(
                     f"{self.source}: its temporary copy in {self._folder} was cut short in use. Run the job again."
@@ -111,13 +96,18 @@ class ScratchColumns:
             got += step
         return values
 
-    def _full(self, folder: Path, found: str) -> EventsError:
+    def _full(self, found: str) -> EventsError:
         return EventsError(
-            f"{self.source}: its temporary copy in {folder} {found}. Free some space, set TMPDIR to a folder on a "
-            "larger disk, or convert the events to HDF5, which is read in place."
+            f"{self.source}: its temporary copy in {self._folder} {found}. Free some space, set TMPDIR to a folder on "
+            "a larger disk, or convert the events to HDF5, which is read in place."
         )
 
 
-def _remove(folder: Path, owner: int) -> None:
-    if os.getpid() == owner:
-        shutil.rmtree(folder, ignore_errors=True)
+def _nameless_file() -> int:
+    with tempfile.TemporaryFile(prefix="enhance-events-", buffering=0) as file:
+        return os.dup(file.fileno())
+
+
+def _close_all(files: tuple[int, ...]) -> None:
+    for file in files:
+        os.close(file)

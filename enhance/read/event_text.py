@@ -43,6 +43,8 @@ class TextEvents:
                 self._skip, names, first = _look(file, path)
         except UnicodeDecodeError as error:
             raise self._not_text() from error
+        except EventsError:
+            raise
         except OSError as error:
             raise EventsError(f"{path} cannot be read: {error.strerror}. Check events.source.") from error
         self._delimiter = _delimiter(first)

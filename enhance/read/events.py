@@ -156,7 +156,6 @@ def _copy(path: Path, container: Container, door: Door, index: TimeIndex) -> Scr
             events = door.admit(raw)
             index.take(events.t_us)
             store.append(events)
-        store.finish()
     except BaseException:
         store.close()
         raise
@@ -172,7 +171,6 @@ def _sorted_copy(store: RowStore, index: TimeIndex) -> tuple[TimeIndex, ScratchC
         for events in in_order(blocks):
             ordered.take(events.t_us)
             copy.append(events)
-        copy.finish()
     except BaseException:
         copy.close()
         raise

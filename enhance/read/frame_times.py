@@ -158,9 +158,9 @@ def _read_rows(path: Path) -> tuple[list[str], list[_Row]]:
                     )
                 values = dict(zip(columns, (cell.strip() for cell in cells), strict=True))
                 rows.append(_Row(reader.line_num, values))
+    except FramesError:
+        raise
     except (OSError, UnicodeDecodeError, csv.Error) as error:
-        if isinstance(error, FramesError):
-            raise
         raise FramesError(f"{path} cannot be read as a table of times: {error}. Check frames.times.") from error
     return columns, rows
 
