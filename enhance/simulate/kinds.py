@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Callable
 
+import cv2
 import numpy as np
 
 from enhance.simulate.cutout import blades, disc_drop, polygon, thin_sheet
@@ -57,7 +58,7 @@ def make_scene(
         raise ValueError(f'{textures!r} is no set of textures; expected "train" or "test"')
     if kind == "label":
         return label_line(size, rng, speed_px_s, color)
-    layers = KINDS[kind](size, rng, speed_px_s, color, textures)
+    layers = _BUILDERS[kind](size, rng, speed_px_s, color, textures)
     return LayeredScene(kind, size, tuple(layers), color)
 
 
@@ -99,7 +100,7 @@ def _texture(size: Size, rng: Rng, speed: float, color: bool, textures: str) -> 
 def _parts(size: Size, rng: Rng, speed: float, color: bool, textures: str) -> list[Layer]:
     """Make textured parts that cross and hide each other over a background at rest."""
     layers: list[Layer] = [_backdrop(size, rng, color, textures)]
-    for index in range(int(rng.integers(4, 8))):
+    for index in range(int(rng.integers(5, 10))):
         radius = rng.uniform(0.10, 0.24) * min(size)
         part = polygon(radius, rng, make_texture(512, rng, textures, color))
         # the first part uses the full speed, so that every scene really is as fast as it was asked to be
@@ -122,7 +123,8 @@ def _to_and_fro(size: Size, rng: Rng, speed: float, radius: float) -> Motion:
         sway_phase=(rng.uniform(0, 6.28), rng.uniform(0, 6.28)),
         angle=rng.uniform(0, 6.28),
         spin=shares[2] * speed / radius * rng.choice([-1, 1]),
-        wrap=(-reach - sway, size[0] + reach + sway, -reach - sway, size[1] + reach + sway),
+        # the jump lies just outside the frame
+        wrap=(-reach, size[0] + reach, -reach, size[1] + reach),
     )
 
 
@@ -144,9 +146,14 @@ def _fan(size: Size, rng: Rng, speed: float, color: bool, textures: str) -> list
 
 def _drops(size: Size, rng: Rng, speed: float, color: bool, textures: str) -> list[Layer]:
     """Make small round drops that fall and speed up over a soft background."""
-    layers: list[Layer] = [_backdrop(size, rng, color, textures)]
+    backdrop = _backdrop(size, rng, color, textures)
+    if rng.random() < 0.6:
+        # as drops are filmed: what lies behind is far out of focus
+        soft = cv2.GaussianBlur(backdrop.image, (0, 0), 0.06 * max(size)).reshape(backdrop.image.shape)
+        backdrop = Still(np.asarray(soft, dtype=np.float32))
+    layers: list[Layer] = [backdrop]
     height = size[1]
-    for _ in range(int(rng.integers(20, 45))):
+    for _ in range(int(rng.integers(30, 70))):
         radius = rng.uniform(1.6, 0.02 * height + 3.0)
         top, way = -2 * radius - 4, height + 4 * radius + 8
         start, sideways = rng.uniform(0.2, 0.6) * speed, rng.uniform(-0.08, 0.08) * speed
@@ -214,21 +221,18 @@ def _text(size: Size, rng: Rng, speed: float, color: bool, textures: str) -> lis
     return [_surface(size, rng, color, textures, _curve(size, rng, speed, heading), "glyphs")]
 
 
-def _label(size: Size, rng: Rng, speed: float, color: bool, textures: str) -> list[Layer]:
-    """Refuse: bottles with printed labels past machine parts; made by `label_line`."""
-    raise NotImplementedError
-
-
 Builder = Callable[[Size, Rng, float, bool, str], list[Layer]]
 
-KINDS: dict[str, Builder] = {
+_BUILDERS: dict[str, Builder] = {
     "texture": _texture,
     "parts": _parts,
     "fan": _fan,
     "drops": _drops,
-    "label": _label,
     "thin": _thin,
     "zoom": _zoom,
     "cloth": _cloth,
     "text": _text,
 }
+
+#: Every kind of scene.
+KINDS: tuple[str, ...] = (*_BUILDERS, "label")

@@ -135,7 +135,7 @@ def _print(rows: int, columns: int, rng: Rng, color: bool) -> Image:
         paper, (int(0.80 * columns), int(0.73 * rows)), columns // 18, (225,) * channels, cv2.FILLED, cv2.LINE_AA
     )
     bend = 0.75 + 0.25 * np.sqrt(np.clip(1 - np.linspace(-0.95, 0.95, columns, dtype=np.float32) ** 2, 0, 1))
-    light = 0.04 + 0.86 * (paper.astype(np.float32) / 255.0) ** np.float32(2.2) * bend[None, :, None]
+    light = 0.08 + 0.70 * (paper.astype(np.float32) / 255.0) ** np.float32(2.2) * bend[None, :, None]
     return light.astype(np.float32)
 
 

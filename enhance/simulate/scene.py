@@ -74,7 +74,7 @@ class LayeredScene:
 
     def __post_init__(self) -> None:
         # frozen: the derived bound is set once, here
-        object.__setattr__(self, "speed_px_s", max(layer.speed(self.size) for layer in self.layers))
+        object.__setattr__(self, "speed_px_s", float(max(layer.speed(self.size) for layer in self.layers)))
 
     def render(self, t_s: float) -> Image:
         """Draw the scene at `t_s` seconds; see `Scene`."""
