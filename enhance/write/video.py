@@ -213,8 +213,6 @@ class ClipWriter:
 
         try:
             for packet in self._stream.encode(frame):
-                # Only the last one's is used: how long the others stand follows from the next one's time.
-                packet.duration = int(round(1_000_000 / self._rate))
                 self._container.mux(packet)
         except (OSError, av.error.FFmpegError) as error:
             raise write_error(self.path, error) from error

@@ -67,11 +67,12 @@ class TestMp4:
             assert container.metadata["title"] == "Bottle line 2"
             assert container.metadata["comment"] == cautions.SHORT
 
-    def test_every_time_is_exact_and_the_last_picture_stands_for_one_period(self, tmp_path: Path):
-        path = write_clip(tmp_path / "a.mp4", noise(5, (32, 32)), rate=Fraction(25))
+    @pytest.mark.parametrize("rate", [Fraction(25), Fraction(30000, 1001), Fraction(1, 2)])
+    def test_every_time_is_exact_and_the_last_picture_stands_for_one_period(self, tmp_path: Path, rate):
+        path = write_clip(tmp_path / "a.mp4", noise(5, (32, 32)), rate=rate)
         assert [frame.pts for frame in decode(path)] == TIMES_US
         with av.open(str(path)) as container:
-            assert container.streams.video[0].duration == TIMES_US[-1] + 40_000
+            assert container.streams.video[0].duration == TIMES_US[-1] + round(1_000_000 / rate)
 
     def test_a_single_picture_makes_a_clip(self, tmp_path: Path):
         path = write_clip(tmp_path / "a.mp4", noise(1, (32, 32)))
