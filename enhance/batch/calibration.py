@@ -2,22 +2,18 @@
 
 from __future__ import annotations
 
-import logging
 import time
 from collections.abc import Iterable, Iterator
 from dataclasses import replace
 from pathlib import Path
 from typing import TYPE_CHECKING
 
-from enhance.batch.job import load_job
+from enhance.batch.job import Job
 from enhance.batch.outcome import JobReport, Outcome, ShelfReport
-from enhance.batch.shelf import Announce, Progress, job_files, refused
-from enhance.errors import EnhanceError, JobError
+from enhance.batch.shelf import Announce, Progress, check_shelf, reason_for
 
 if TYPE_CHECKING:
     from enhance.rig import Quantity, Rig
-
-logger = logging.getLogger(__name__)
 
 
 def calibrate_shelf(paths: Iterable[Path | str], announce: Announce, progress: Progress) -> ShelfReport:
@@ -41,27 +37,21 @@ def calibrate_shelf(paths: Iterable[Path | str], announce: Announce, progress: P
         If a folder holds no job file.
     """
     reports = []
-    for path in job_files(paths):
-        report = _calibrate(path, progress)
+    for each in check_shelf(paths):
+        report = _calibrate(each.job, each.report, progress) if each.job and each.may_start else each.report
         announce(report)
         reports.append(report)
     return ShelfReport(tuple(reports))
 
 
-def _calibrate(path: Path, progress: Progress) -> JobReport:
+def _calibrate(job: Job, report: JobReport, progress: Progress) -> JobReport:
     from enhance import clip
 
-    try:
-        settings = load_job(path).settings
-    except JobError as error:
-        return refused(path, error)
     started = time.monotonic()
-    report = JobReport(path, settings.title, Outcome.FAILED, settings.output.folder)
     try:
-        rig = clip.calibrate(settings, lambda done, total, what: progress(path, done, total, what))
-    except EnhanceError as error:
-        logger.debug("%s failed", path, exc_info=True)
-        return replace(report, reasons=(str(error),))
+        rig = clip.calibrate(job.settings, lambda done, total, what: progress(job.path, done, total, what))
+    except Exception as error:  # as in a run: no job ends the work for the others
+        return replace(report, outcome=Outcome.FAILED, reasons=(reason_for(job.path, error),))
     return replace(report, outcome=Outcome.DONE, facts=tuple(rig_lines(rig)), seconds=time.monotonic() - started)
 
 

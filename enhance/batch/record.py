@@ -13,7 +13,7 @@ from collections.abc import Iterable, Iterator, Mapping
 from pathlib import Path
 from typing import Any
 
-from enhance.errors import JobError, ReadError
+from enhance.errors import JobError, ReadError, WriteError
 from enhance.settings import ClipSettings
 
 RECORD = "record.json"
@@ -182,22 +182,27 @@ def remove_old(folder: Path) -> int:
     ------
     JobError
         If the record is not one of ours.
+    WriteError
+        If a listed file cannot be removed.
     """
     record = read_record(folder)
     if record is None:
         return 0
-    removed = 0
-    emptied = set()
-    for path in _listed(folder, record["files"]):
-        path.unlink(missing_ok=True)
-        removed += 1
-        emptied.add(path.parent)
-    for parent in emptied - {folder}:
-        if parent.is_dir() and not any(parent.iterdir()):
-            parent.rmdir()
-    # last: a removal that was cut short can be taken up again
-    (folder / RECORD).unlink()
-    return removed
+    listed = list(_listed(folder, record["files"]))
+    try:
+        for path in listed:
+            path.unlink(missing_ok=True)
+        for parent in {path.parent for path in listed} - {folder}:
+            if parent.is_dir() and not any(parent.iterdir()):
+                parent.rmdir()
+        # last: a removal that was cut short can be taken up again
+        (folder / RECORD).unlink()
+    except OSError as error:
+        raise WriteError(
+            f"{error.filename}: was left by an earlier run and cannot be removed ({error.strerror}); remove it, or give "
+            f"output.folder another name"
+        ) from error
+    return len(listed)
 
 
 def _listed(folder: Path, names: Iterable[Any]) -> Iterator[Path]:

@@ -132,17 +132,21 @@ def run_shelf(
     return ShelfReport(tuple(reports.values()))
 
 
-def refused(path: Path, error: JobError) -> JobReport:
-    """Report a job file that is wrong; the error's first line names the file, which the report does as well."""
-    reasons = error.mistakes or (str(error).removeprefix(f"{path}: "),)
-    return JobReport(path, path.stem, Outcome.REFUSED, reasons=reasons)
+def reason_for(path: Path, error: Exception) -> str:
+    """Say why a job failed: our own errors speak for themselves; any other is named, and shown whole by --debug."""
+    logger.debug("%s failed", path, exc_info=error)
+    if isinstance(error, EnhanceError):
+        return str(error)
+    return f"unforeseen {type(error).__name__}: {error}. Run it again with --debug to see where"
 
 
 def _check(path: Path) -> Checked:
     try:
         job = load_job(path)
     except JobError as error:
-        return Checked(refused(path, error))
+        # the error's first line names the file, which the report does as well
+        reasons = error.mistakes or (str(error).removeprefix(f"{path}: "),)
+        return Checked(JobReport(path, path.stem, Outcome.REFUSED, reasons=reasons))
     report = JobReport(path, job.settings.title, Outcome.NOT_STARTED, job.settings.output.folder)
     return Checked(_inspect(job, report), job)
 
@@ -157,8 +161,8 @@ def _inspect(job: Job, report: JobReport) -> JobReport:
         findings = clip.check(job.settings)
         if not findings.mistakes:
             probe_folder(job.settings.output.folder, findings.bytes)
-    except EnhanceError as error:
-        return replace(report, outcome=Outcome.REFUSED, reasons=(str(error),))
+    except Exception as error:
+        return replace(report, outcome=Outcome.REFUSED, reasons=(reason_for(job.path, error),))
     return replace(
         report,
         outcome=Outcome.REFUSED if findings.mistakes else report.outcome,
@@ -201,13 +205,8 @@ def _run(job: Job, report: JobReport, progress: Progress) -> JobReport:
         run.result = clip.run(job.settings, lambda done, total, what: progress(job.path, done, total, what))
     except KeyboardInterrupt:
         outcome, reason = Outcome.INTERRUPTED, "stopped by Ctrl-C; run it again to begin anew"
-    except EnhanceError as error:
-        logger.debug("%s failed", job.path, exc_info=True)
-        outcome, reason = Outcome.FAILED, str(error)
-    except Exception as error:  # one job that breaks in an unforeseen way must not end the night for the others
-        logger.debug("%s failed", job.path, exc_info=True)
-        outcome = Outcome.FAILED
-        reason = f"unforeseen {type(error).__name__}: {error}. Run it again with --debug to see where"
+    except Exception as error:  # one job that breaks, even in an unforeseen way, must not end the night for the others
+        outcome, reason = Outcome.FAILED, reason_for(job.path, error)
     report = replace(report, outcome=outcome, reasons=(reason,) if reason else (), seconds=time.monotonic() - started)
     if run.result is not None:
         cautions = tuple(dict.fromkeys((*report.cautions, *run.result.notes)))

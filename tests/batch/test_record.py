@@ -5,7 +5,7 @@ from pathlib import Path
 import pytest
 
 from enhance.batch import read_job, record
-from enhance.errors import JobError, ReadError
+from enhance.errors import JobError, ReadError, WriteError
 
 
 def write_old(folder: Path, files: list[str]) -> None:
@@ -76,6 +76,21 @@ def test_a_listed_path_that_leads_out_of_the_folder_is_never_followed(tmp_path: 
     write_old(out, [str(mine) if climbing == "absolute" else climbing])
     record.remove_old(out)
     assert mine.read_text() == "x"
+
+
+def test_an_old_file_that_cannot_be_removed_is_named(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    (tmp_path / "pictures.csv").write_text("x")
+    write_old(tmp_path, ["pictures.csv"])
+
+    # as root nothing is forbidden, so the answer is put into the system's mouth
+    def forbidden(path: Path, missing_ok: bool = False) -> None:
+        raise PermissionError(13, "Permission denied", str(path))
+
+    monkeypatch.setattr(Path, "unlink", forbidden)
+    with pytest.raises(
+        WriteError, match=r"pictures.csv: was left by an earlier run and cannot be removed \(Permission"
+    ):
+        record.remove_old(tmp_path)
 
 
 def test_a_folder_without_a_record_loses_nothing(tmp_path: Path) -> None:
