@@ -199,8 +199,8 @@ def remove_old(folder: Path) -> int:
         (folder / RECORD).unlink()
     except OSError as error:
         raise WriteError(
-            f"{error.filename}: was left by an earlier run and cannot be removed ({error.strerror}); remove it, or give "
-            f"output.folder another name"
+            f"{error.filename}: was left by an earlier run and cannot be removed ({error.strerror}); remove it, "
+            f"or give output.folder another name"
         ) from error
     return len(listed)
 
