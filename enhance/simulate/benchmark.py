@@ -71,11 +71,11 @@ class Benchmark:
 
 
 BENCHMARK: tuple[Benchmark, ...] = (
-    Benchmark("texture", FIRST_SEED + 1, 15.0, 0.5, (0.20, 0.22)),
-    Benchmark("texture", FIRST_SEED + 2, 10.0, 0.4, (0.15, 0.15)),
+    Benchmark("texture", FIRST_SEED + 1, 17.0, 0.5, (0.20, 0.22)),
+    Benchmark("texture", FIRST_SEED + 2, 13.0, 0.4, (0.15, 0.15)),
     Benchmark("texture", FIRST_SEED + 3, 20.0, 0.6, (0.30, 0.28)),
-    Benchmark("parts", FIRST_SEED + 4, 15.0, 0.5, (0.20, 0.20)),
-    Benchmark("parts", FIRST_SEED + 5, 12.0, 0.6, (0.25, 0.22)),
+    Benchmark("parts", FIRST_SEED + 4, 17.0, 0.5, (0.20, 0.20)),
+    Benchmark("parts", FIRST_SEED + 5, 15.0, 0.6, (0.25, 0.22)),
     Benchmark("fan", FIRST_SEED + 6, 15.0, 0.5, (0.20, 0.22)),
     Benchmark("fan", FIRST_SEED + 7, 20.0, 0.4, (0.15, 0.18)),
     Benchmark("drops", FIRST_SEED + 8, 12.0, 0.5, (0.20, 0.20)),

@@ -78,7 +78,7 @@ def _backdrop(size: Size, rng: Rng, color: bool, textures: str) -> Still:
 
 def _curve(size: Size, rng: Rng, speed: float, heading: float) -> Motion:
     """Choose a bent path that speeds up and slows down, bounded by `speed` all through."""
-    shares = rng.dirichlet([6.0, 2.0, 1.0])
+    shares = rng.dirichlet([10.0, 2.0, 1.0])
     rate, swing_rate = rng.uniform(6.0, 16.0), rng.uniform(4.0, 10.0)
     sway = shares[1] * speed / rate / np.sqrt(2)
     return Motion(
@@ -104,14 +104,14 @@ def _parts(size: Size, rng: Rng, speed: float, color: bool, textures: str) -> li
         radius = rng.uniform(0.10, 0.24) * min(size)
         part = polygon(radius, rng, make_texture(512, rng, textures, color))
         # the first part uses the full speed, so that every scene really is as fast as it was asked to be
-        own = speed * (1.0 if index == 0 else rng.uniform(0.3, 1.0))
+        own = speed * (1.0 if index == 0 else rng.uniform(0.4, 1.0))
         layers.append(Part(part, _to_and_fro(size, rng, own, radius), radius))
     return layers
 
 
 def _to_and_fro(size: Size, rng: Rng, speed: float, radius: float) -> Motion:
     """Cross the frame again and again, turn on the way; bounded by `speed`."""
-    shares = rng.dirichlet([5.0, 2.0, 1.0])
+    shares = rng.dirichlet([8.0, 2.0, 1.0])
     heading, rate = rng.uniform(0, 2 * np.pi), rng.uniform(8.0, 16.0)
     reach = radius + 4.0
     sway = shares[1] * speed / rate / np.sqrt(2)
