@@ -4,6 +4,7 @@ import os
 import subprocess
 import sys
 from pathlib import Path
+from types import ModuleType, SimpleNamespace
 
 import pytest
 
@@ -202,6 +203,44 @@ def test_check_of_a_wrong_job_names_its_mistakes_and_exits_1(tmp_path: Path, cap
     said = capsys.readouterr().out
     assert "line 2: frames.source: found 3; expected text" in said
     assert "output.folder: is missing" in said
+
+
+def test_a_clean_check_tells_the_findings_writes_previews_and_exits_0(tmp_path: Path, monkeypatch, capsys) -> None:
+    job = tmp_path / "a.toml"
+    job.touch()
+    settings = SimpleNamespace(output=SimpleNamespace(folder=tmp_path / "out"))
+    told = JobReport(job, "t", Outcome.NOT_STARTED, tmp_path / "out", facts=("15 frames",), seconds=3.0)
+    checked = SimpleNamespace(report=told, job=SimpleNamespace(settings=settings), may_start=True)
+    monkeypatch.setattr(enhance.batch, "check_shelf", lambda jobs: [checked])
+    clip = ModuleType("enhance.clip")
+    clip.preview = lambda settings, folder: [folder / "1.png"]
+    monkeypatch.setitem(sys.modules, "enhance.clip", clip)
+    monkeypatch.setattr(enhance, "clip", clip, raising=False)
+    assert exit_code_of("check", str(job)) == 0
+    assert "preview" not in capsys.readouterr().out
+    assert exit_code_of("check", "--preview", str(job)) == 0
+    said = capsys.readouterr().out
+    assert f"{job}: would run, in about 3 s" in said
+    assert "\n  15 frames\n" in said
+    assert f"preview: {tmp_path / 'out-preview' / '1.png'}" in said
+
+
+def test_calibrate_tells_the_rig(monkeypatch, capsys) -> None:
+    def work(jobs, announce, progress) -> ShelfReport:
+        done = JobReport(Path("a.toml"), "t", Outcome.DONE, Path("out"), facts=("clock offset: -7300 us",))
+        announce(done)
+        return ShelfReport((done,))
+
+    monkeypatch.setattr(enhance.batch, "calibrate_shelf", work)
+    assert exit_code_of("calibrate", "a.toml") == 0
+    assert "  clock offset: -7300 us" in capsys.readouterr().out
+
+
+def test_train_hands_its_arguments_on(monkeypatch) -> None:
+    asked = {}
+    monkeypatch.setattr("enhance.train.run", lambda folder, **rest: asked.update(rest, folder=folder), raising=False)
+    assert exit_code_of("train", "weights", "--minutes", "1.5", "--recordings", "3", "--seed", "7", "--resume") == 0
+    assert asked == {"folder": Path("weights"), "minutes": 1.5, "recordings": 3, "seed": 7, "resume": True}
 
 
 def test_the_kinds_of_scene_are_those_of_the_simulator() -> None:
