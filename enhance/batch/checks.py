@@ -66,6 +66,12 @@ def _get(document: Document, table: str, key: str, kind: type | tuple[type, ...]
     return value if isinstance(value, kind) and not isinstance(value, bool) else None
 
 
+def _path(document: Document, table: str, key: str, folder: Path) -> Path | None:
+    """Return where a key's path leads; None where there is none, or no path could be written so."""
+    given = _get(document, table, key, str)
+    return folder / given if given and "\0" not in given else None
+
+
 def _light(document: Document) -> Iterator[Mistake]:
     black, white = (_get(document, "frames", key, (int, float)) for key in ("black", "white"))
     if white is not None and not white > (black or 0):
@@ -141,20 +147,19 @@ def _times(values: list[Any]) -> list[int] | None:
 
 def _inputs(document: Document, folder: Path) -> Iterator[Mistake]:
     for table, key in INPUTS:
-        given = _get(document, table, key, str)
-        if not given or (folder / given).is_file():
+        path = _path(document, table, key, folder)
+        # os.path, for it answers with no where a path cannot be (a name too long for the disk)
+        if path is None or os.path.isfile(path):
             continue
-        path = folder / given
-        if path.is_dir():
-            if (table, key) != ("frames", "source"):
-                yield (table, key), f"{path} is a folder; expected a file"
-        else:
+        if not os.path.isdir(path):
             yield (table, key), f"{path} does not exist; paths are relative to the job file's folder{_neighbour(path)}"
+        elif (table, key) != ("frames", "source"):
+            yield (table, key), f"{path} is a folder; expected a file"
 
 
 def _neighbour(path: Path) -> str:
     """Name the entry of the same folder that was probably meant, or the first folder on the way that is missing."""
-    if not path.parent.is_dir():
+    if not os.path.isdir(path.parent):
         return f". Nor does the folder {path.parent}"
     close = nearest(path.name, sorted(os.listdir(path.parent))[:10_000])
     return f". Did you mean {close}?" if close else ""
@@ -162,8 +167,8 @@ def _neighbour(path: Path) -> str:
 
 def _images(document: Document, folder: Path) -> Iterator[Mistake]:
     """Find what a folder of images cannot say by itself: when they were taken, what their code values mean."""
-    given = _get(document, "frames", "source", str)
-    if not given or not (folder / given).is_dir():
+    path = _path(document, "frames", "source", folder)
+    if path is None or not os.path.isdir(path):
         return
     table = document["frames"]
     if "times" not in table:
@@ -176,33 +181,31 @@ def _images(document: Document, folder: Path) -> Iterator[Mistake]:
 
 
 def _output(document: Document, job: Path) -> Iterator[Mistake]:
-    given = _get(document, "output", "folder", str)
-    if not given:
+    key = ("output", "folder")
+    given = _path(document, *key, job.parent)
+    if given is None:
         return
-    output = (job.parent / given).resolve()
-    if output.exists() and not output.is_dir():
-        yield ("output", "folder"), f"{job.parent / given} is a file; expected a folder, which need not exist"
+    output = given.resolve()
+    if os.path.exists(output) and not os.path.isdir(output):
+        yield key, f"{given} is a file; expected a folder, which need not exist"
         return
-    parent = next(above for above in (output, *output.parents) if above.exists())
-    if not os.access(parent, os.W_OK):
-        yield ("output", "folder"), f"{job.parent / given} cannot be written to; choose another folder"
+    above = next(path for path in (output, *output.parents) if os.path.exists(path))
+    if not os.access(above, os.W_OK):
+        yield key, f"{given} cannot be written to; choose another folder"
     held = [name for name, path in _held(document, job) if path == output or output in path.parents]
+    source = _path(document, "frames", "source", job.parent)
     if held:
         yield (
-            ("output", "folder"),
-            f"{job.parent / given} holds inputs ({', '.join(held)}); results must not mix with them: choose a folder "
-            f"of their own",
+            key,
+            f"{given} holds inputs ({', '.join(held)}); results must not mix with them: choose a folder of their own",
         )
-        return
-    frames = _get(document, "frames", "source", str)
-    source = (job.parent / frames).resolve() if frames else None
-    if source and source.is_dir() and source in output.parents:
-        yield ("output", "folder"), f"{job.parent / given} lies inside frames.source; choose a folder outside it"
+    elif source and os.path.isdir(source) and source.resolve() in output.parents:
+        yield key, f"{given} lies inside frames.source; choose a folder outside it"
 
 
 def _held(document: Document, job: Path) -> Iterator[tuple[str, Path]]:
     yield "the job file", job.resolve()
     for table, key in INPUTS:
-        given = _get(document, table, key, str)
-        if given:
-            yield f"{table}.{key}", (job.parent / given).resolve()
+        path = _path(document, table, key, job.parent)
+        if path:
+            yield f"{table}.{key}", path.resolve()

@@ -10,7 +10,7 @@ import math
 from fractions import Fraction
 from typing import Annotated, Any, Literal, NoReturn
 
-from pydantic import BaseModel, BeforeValidator, ConfigDict, Field, PlainValidator
+from pydantic import AfterValidator, BaseModel, BeforeValidator, ConfigDict, Field, PlainValidator
 
 from enhance.clock import parse_duration
 from enhance.light import check_curve
@@ -141,11 +141,17 @@ def _registration(value: Any) -> str:
     return "shared"
 
 
+def _writable(text: str) -> str:
+    if "\0" in text:
+        raise ValueError("holds a zero byte, which no name can; write the name anew")
+    return text
+
+
 Duration = Annotated[int, PlainValidator(duration)]
 LaterDuration = Annotated[int, PlainValidator(_not_before_zero)]
 Rate = Annotated[Fraction, PlainValidator(_rate)]
 Number = Annotated[float, PlainValidator(_number)]
-Name = Annotated[str, Field(min_length=1)]
+Name = Annotated[str, Field(min_length=1), AfterValidator(_writable)]
 Factor = Annotated[int, Field(ge=1, le=HIGHEST_FACTOR)]
 
 

@@ -15,6 +15,7 @@ from enhance.errors import JobError
         ({"events.source": '"event.h5"'}, r"does not exist; paths are relative to the job file's folder"),
         ({"events.source": '"night/events.h5"'}, r"Nor does the folder .*night"),
         ({"events.source": '"frames"'}, r"events.source: .*frames is a folder; expected a file"),
+        ({"events.source": f'"{"e" * 300}.h5"'}, r"e\.h5 does not exist"),
         ({"rig.file": '"rig.toml"'}, r"rig.file: .*rig.toml does not exist"),
     ],
 )

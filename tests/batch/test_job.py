@@ -139,6 +139,7 @@ def test_five_distinct_mistakes_are_reported_at_once_each_with_its_line(write_jo
 WRONG = [
     ({"title": "3"}, 'title: found 3; expected text in quotation marks, such as "name"'),
     ({"title": '""'}, "title: is empty; write a name, or leave the key out"),
+    ({"output.folder": '"a\\u0000b"'}, "output.folder: holds a zero byte, which no name can"),
     ({"frames.source": None}, "line 1: frames.source: is missing; this key is always required"),
     ({"events.source": None}, "^events.source: is missing"),
     ({"output.folder": None}, "^output.folder: is missing"),
@@ -243,3 +244,36 @@ def test_a_file_that_is_not_there_or_not_text_is_refused(tmp_path: Path) -> None
         read_job(tmp_path / "bytes.toml")
     with pytest.raises(JobError, match="cannot be read"):
         read_job(tmp_path)
+
+
+ODD_VALUES = [
+    "1",
+    "-1",
+    "1e400",
+    "true",
+    '""',
+    '"x"',
+    "[]",
+    "{}",
+    "[[1]]",
+    "[{}]",
+    "2026-01-01",
+    '"\\u0000"',
+    '["1 s", 3]',
+]
+
+
+@pytest.mark.parametrize("odd", ODD_VALUES)
+def test_whatever_stands_at_a_key_the_answer_is_settings_or_mistakes_in_our_words(write_job, odd: str) -> None:
+    lines = EVERY_KEY.splitlines()
+    for number, line in enumerate(lines):
+        if "=" not in line:
+            continue
+        key = line.partition("=")[0]
+        text = "\n".join([*lines[:number], f"{key}= {odd}", *lines[number + 1 :]])
+        try:
+            read_job(write_job(text=text))
+        except JobError as error:
+            ours = [mistake for mistake in error.mistakes if f"line {number + 1}: " in mistake]
+            assert ours or "rig.toml does not exist" in str(error), (line, odd)
+            assert "nput should" not in str(error)  # the validator's own words
