@@ -23,7 +23,6 @@ PHOTOGRAPHS = {
         "grass.png",
         "camera.png",
         "chelsea.png",
-        "cell.png",
         "retina.jpg",
         "coins.png",
         "microaneurysms.png",
