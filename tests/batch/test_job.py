@@ -263,17 +263,24 @@ ODD_VALUES = [
 ]
 
 
+def mistakes_or_none(path: Path) -> list[str]:
+    try:
+        read_job(path)
+    except JobError as error:
+        return list(error.mistakes)
+    return []
+
+
 @pytest.mark.parametrize("odd", ODD_VALUES)
-def test_whatever_stands_at_a_key_the_answer_is_settings_or_mistakes_in_our_words(write_job, odd: str) -> None:
+def test_whatever_stands_at_a_key_the_answer_is_settings_or_its_mistake_in_our_words(
+    write_job, tmp_path: Path, odd: str
+) -> None:
+    (tmp_path / "rig.toml").touch()
     lines = EVERY_KEY.splitlines()
     for number, line in enumerate(lines):
         if "=" not in line:
             continue
         key = line.partition("=")[0]
-        text = "\n".join([*lines[:number], f"{key}= {odd}", *lines[number + 1 :]])
-        try:
-            read_job(write_job(text=text))
-        except JobError as error:
-            ours = [mistake for mistake in error.mistakes if f"line {number + 1}: " in mistake]
-            assert ours or "rig.toml does not exist" in str(error), (line, odd)
-            assert "nput should" not in str(error)  # the validator's own words
+        told = mistakes_or_none(write_job(text="\n".join([*lines[:number], f"{key}= {odd}", *lines[number + 1 :]])))
+        assert not told or any(f"line {number + 1}: " in mistake for mistake in told), (line, odd, told)
+        assert "nput should" not in "".join(told)  # the validator's own words
