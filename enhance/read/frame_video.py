@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections import OrderedDict
 from collections.abc import Iterator, Sequence
+from contextlib import contextmanager
 from fractions import Fraction
 from pathlib import Path
 from typing import Any
@@ -102,6 +103,7 @@ class Video:
         self.names: Sequence[str] = [str(i) for i in range(len(self._pts))]
         first = self._decode(0)
         self._conversion: Conversion = conversion(self.path, context, first)
+        self._cache[0] = self._conversion.apply(first)
         self.channels, self.depth = self._conversion.channels, self._conversion.depth
         self.light_curve = light_curve(context, first)
         self.notes = [*self._conversion.notes, *self._notes(base, first)]
@@ -137,7 +139,19 @@ class Video:
         return times[order], np.flatnonzero(np.array(keys)[order])
 
     def _decode(self, index: int) -> Any:
-        """Return the decoded frame: read on from the last one if no key frame lies between, else seek."""
+        """Return the decoded frame, if its checksums hold."""
+        if self._stream.codec_context.name != "ffv1":
+            return self._find(index)
+        # FFV1 carries checksums, but its decoder only mutters when they fail, and repeats the picture before.
+        with _overheard() as messages:
+            frame = self._find(index)
+        if any("CRC mismatch" in text for _, _, text in messages):
+            self._frames = None
+            raise self._undecodable(index, "its checksum does not fit")
+        return frame
+
+    def _find(self, index: int) -> Any:
+        """Read on from the last frame if no key frame lies between, else seek."""
         import av
 
         place = int(np.searchsorted(self._keys, index, side="right")) - 1
@@ -186,6 +200,14 @@ class Video:
                 f"{self.path}: the container keeps times in steps of {float(base * 1_000_000):g} us only; "
                 "give exact times in frames.times if they are known"
             )
+        missing_us = (self._container.duration or 0) - int(self.stamps_us[-1] - self.stamps_us[0])
+        longest_us = int(np.diff(self.stamps_us).max(initial=0))
+        # A header tells the length when it was finished; a copy that stops early still has the old one.
+        if len(self._container.streams) == 1 and missing_us > 3 * longest_us + 100_000:
+            notes.append(
+                f"{self.path}: its header says {(self._container.duration or 0) / 1e6:g} s, but its pictures end "
+                f"{missing_us / 1e6:g} s before: the file may be cut short"
+            )
         if len(self._container.streams.video) > 1:
             notes.append(f"{self.path}: the first of {len(self._container.streams.video)} video streams is used")
         if first.interlaced_frame:
@@ -193,6 +215,22 @@ class Video:
         if first.rotation:
             notes.append(f"{self.path} asks to be turned by {first.rotation} degrees for display; its pixels are not")
         return notes
+
+
+@contextmanager
+def _overheard() -> Iterator[list[tuple[int, str, str]]]:
+    """Collect what the decoder says meanwhile; repeated words count again."""
+    import av.logging
+
+    level, skip = av.logging.get_level(), av.logging.get_skip_repeated()
+    av.logging.set_level(av.logging.ERROR)
+    av.logging.set_skip_repeated(False)
+    try:
+        with av.logging.Capture(local=True) as messages:
+            yield messages
+    finally:
+        av.logging.set_skip_repeated(skip)
+        av.logging.set_level(level)
 
 
 def _damaged(path: Path, error: BaseException) -> FramesError:
