@@ -121,7 +121,9 @@ def simulate(
         if count == samples:
             codes.append(camera.capture((exposed / count).astype(np.float32), camera_rng))
             count = 0
-    events, clock, cover = _into_event_clock(_joined(kept), duration_us, clock_offset_us, drift_ppm)
+    # what latency carries past the end is not recorded any more
+    told = _joined(kept).between(0, duration_us)
+    events, clock, cover = _into_event_clock(told, duration_us, clock_offset_us, drift_ppm)
     frames = FrameArray(np.stack(codes), starts, ends, camera.light)
     return Simulated(
         Recording(title or scene.name, frames, EventArray(events, scene.size, cover)),
@@ -184,4 +186,6 @@ def _into_event_clock(
     # t_event = t_first + (t_frame - t_frame_first) / (1 + 1e-6 drift), and t_first = t_frame_first - offset
     stretch = 1.0 / (1.0 + 1e-6 * drift_ppm)
     moved, cover = (np.rint((t - first) * stretch).astype(np.int64) + first - offset_us for t in (events.t_us, edges))
-    return Events(moved, events.x, events.y, events.polarity), clock, (int(cover[0]), int(cover[1]))
+    # rounding may set the last event onto the end, which is outside: half-open
+    end = max(int(cover[1]), int(moved[-1]) + 1) if len(moved) else int(cover[1])
+    return Events(moved, events.x, events.y, events.polarity), clock, (int(cover[0]), end)

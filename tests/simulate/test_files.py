@@ -113,3 +113,5 @@ def test_the_demo_is_a_blurred_labelling_line_with_a_clock_of_its_own(tmp_path):
         # every exposure is covered once the clocks are brought together
         assert file["t"][0] + truth["clock"]["offset_us"] < table[0, 0]
         assert file["t"][-1] + truth["clock"]["offset_us"] > table[-1, 1]
+        start, end = (int(edge.removesuffix(" us")) for edge in job["events"]["cover"])
+        assert start <= file["t"][0] <= file["t"][-1] < end

@@ -74,10 +74,12 @@ def test_events_carry_the_change_of_log_light_to_within_both_thresholds():
 
 
 def test_events_are_sorted_within_cover_and_on_the_sensor():
-    simulated = simulate(scene(), CAMERA, EventSensor(noise_hz=2.0), 0.06, 1)
+    sensor = EventSensor(noise_hz=2.0, latency_us=200.0, latency_jitter_us=50.0)
+    simulated = simulate(scene(), CAMERA, sensor, 0.06, 1, drift_ppm=90.0)
     source = simulated.recording.events
     assert (np.diff(source.events.t_us) >= 0).all()
-    assert source.cover_start_us <= source.first_us <= source.last_us <= source.cover_end_us == 60_000
+    assert source.cover_start_us <= source.first_us <= source.last_us < source.cover_end_us
+    assert source.cover_end_us == pytest.approx(60_000 / (1 + 90e-6), abs=1)
     assert (source.events.x.max(), source.events.y.max()) == (63, 47)
     assert set(np.unique(source.events.polarity)) == {-1, 1}
 
