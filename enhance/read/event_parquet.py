@@ -41,7 +41,8 @@ class ParquetEvents:
         self.path = path
         self._damage = (pyarrow.ArrowException, OSError)
         try:
-            self._file = pyarrow.parquet.ParquetFile(path)
+            # Without buffering ahead: it would hold several row groups at once.
+            self._file = pyarrow.parquet.ParquetFile(path, pre_buffer=False)
         except self._damage as error:
             raise self._damaged(error) from error
         schema = self._file.schema_arrow

@@ -43,7 +43,8 @@ class Video:
         self._frames: Iterator[Any] | None = None
         self._next = 0
         try:
-            self._container = av.open(str(path))
+            # An absolute path: in a relative one, what stands before a colon would be taken for a protocol.
+            self._container = av.open(str(path.absolute()))
         except (av.FFmpegError, OSError, ValueError) as error:
             raise _damaged(path, error) from error
         try:

@@ -142,6 +142,30 @@ def test_columns_are_mapped_by_dataset_path_name_and_field(tmp_path, some_events
     assert same(source.between(source.first_us, source.last_us + 1), some_events)
 
 
+def test_columns_are_mapped_by_field_of_a_compound_dataset(tmp_path, some_events):
+    import h5py
+
+    table = np.empty(len(some_events), dtype=[("when", "i8"), ("x", "u2"), ("y", "u2"), ("on", "?")])
+    table["when"], table["x"], table["y"] = some_events.t_us, some_events.x, some_events.y
+    table["on"] = some_events.polarity > 0
+    path = tmp_path / "e.h5"
+    with h5py.File(path, "w") as file:
+        file["cam/list"] = table
+    source = open_events(EventsSettings(path, columns={"t": "when", "p": "on"}), SIZE)
+    assert same(source.between(source.first_us, source.last_us + 1), some_events)
+
+
+def test_columns_that_stand_apart_are_found_if_each_is_the_only_one(tmp_path, some_events):
+    import h5py
+
+    path = tmp_path / "e.h5"
+    with h5py.File(path, "w") as file:
+        file["clock/ts"], file["place/x"] = some_events.t_us, some_events.x
+        file["place/y"], file["sign/pol"] = some_events.y, some_events.polarity
+    source = open_events(EventsSettings(path), SIZE)
+    assert same(source.between(source.first_us, source.last_us + 1), some_events)
+
+
 def test_the_sensor_may_differ_in_size_from_the_frames(tmp_path):
     path = tmp_path / "e.npz"
     np.savez(path, t=[0, 1], x=[0, 199], y=[0, 99], p=[1, 0])

@@ -266,3 +266,16 @@ def test_a_full_disk_is_told_before_and_while_copying(tmp_path, monkeypatch):
 
     monkeypatch.setattr(scratch.os, "write", full)
     refused(path, r"could not be written \(No space left on device\). Free some space")
+
+
+def test_a_damaged_chunk_of_hdf5_is_noticed(tmp_path):
+    path = hdf5(tmp_path / "e.h5", lambda f: [f.create_dataset(k, data=v, compression="gzip") for k, v in GOOD.items()])
+    data = bytearray(path.read_bytes())
+    import h5py
+
+    with h5py.File(path) as file:
+        chunk = file["t"].id.get_chunk_info(0)
+    middle = chunk.byte_offset + chunk.size // 2
+    data[middle : middle + 8] = b"\xff" * 8
+    path.write_bytes(data)
+    refused(path, "e.h5 cannot be read as HDF5: .*copy it again or export it anew")

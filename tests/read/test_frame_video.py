@@ -1,6 +1,7 @@
 """Videos: colour, depth and range from the tags, damage, and time stamps that are none."""
 
 from fractions import Fraction
+from pathlib import Path
 
 import av
 import numpy as np
@@ -212,3 +213,11 @@ def test_reading_in_order_never_seeks(tmp_path, monkeypatch):
         video.codes(i)
         assert video._frames is started
     video.close()
+
+
+def test_a_colon_in_a_relative_name_is_no_protocol(tmp_path, monkeypatch):
+    monkeypatch.chdir(tmp_path)
+    write(tmp_path / "v.mp4", "libx264", "yuv420p", (100, 128, 128)).rename("line:3.mp4")
+    source = opened(Path("line:3.mp4"))
+    assert len(source) == 3
+    source.close()
