@@ -18,6 +18,9 @@ from numpy.typing import NDArray
 
 Image = NDArray[np.float32]
 
+#: Light added before a logarithm (1 = full scale): a frame's noise and residual level, below which ratios mean nothing.
+LOG_FLOOR = np.float32(1 / 255)
+
 #: ITU-R BT.709 luma weights of linear R, G, B (rows of the standard's Y').
 LUMA_BT709 = (0.2126, 0.7152, 0.0722)
 
@@ -98,6 +101,11 @@ def encode(curve: str, linear: NDArray[np.generic]) -> Image:
 def luma(linear: Image) -> Image:
     """Luminance of linear light, (H, W, 3) R G B to (H, W); a grey image passes unchanged."""
     return linear if linear.ndim == 2 else linear @ np.asarray(LUMA_BT709, dtype=np.float32)
+
+
+def log_light(linear: Image) -> Image:
+    """Natural logarithm of linear light, any shape, with `LOG_FLOOR` added; noise below black counts as none."""
+    return np.log(np.maximum(linear, 0) + LOG_FLOOR)
 
 
 def _odd(function: object, curve: str, value: Image) -> Image:

@@ -101,6 +101,33 @@ class Events:
         return Events(np.empty(0, np.int64), np.empty(0, np.uint16), np.empty(0, np.uint16), np.empty(0, np.int8))
 
 
+@dataclass(frozen=True)
+class Contrast:
+    """What one event means.
+
+    Parameters
+    ----------
+    positive, negative : float
+        Contrast thresholds, natural log units, both > 0.
+    ramp_us : int
+        How long before its event a change of light began, at the most; 0: the staircase of the published form.
+    """
+
+    positive: float
+    negative: float
+    ramp_us: int = 0
+
+    @property
+    def thresholds(self) -> tuple[float, float]:
+        """Positive and negative threshold."""
+        return self.positive, self.negative
+
+    @property
+    def mean(self) -> float:
+        """Mean of the two thresholds."""
+        return 0.5 * (self.positive + self.negative)
+
+
 class FrameSource(Protocol):
     """Frames of a recording, decoded one at a time.
 

@@ -6,14 +6,14 @@ Every quantity carries its value, uncertainty, method and evidence. An unknown v
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass, field, replace
+from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
 from enhance.clock import ClockMap
-from enhance.recording import Events, EventSource
+from enhance.recording import Contrast, Events, EventSource
 
 
 @dataclass(frozen=True)
@@ -48,8 +48,12 @@ class Rig:
         ``t_frame = t_event + offset + 1e-6 * drift_ppm * (t_event - t_first_event)``.
     contrast_positive, contrast_negative : Quantity
         Contrast thresholds, natural log units, both > 0.
+    ramp_us : Quantity
+        How long before its event a change of light began, at the most; 0: a staircase.
     hot_pixels : Quantity
         Value: list of [x, y] in sensor pixels, whose events are dropped.
+    frame_noise : Quantity
+        Value: [floor, shot]; variance of the frames' linear light = floor^2 + shot * light, 1 = full scale.
     sensor_size : tuple of int
         Width, height of the event sensor.
     """
@@ -58,21 +62,23 @@ class Rig:
     drift_ppm: Quantity
     contrast_positive: Quantity
     contrast_negative: Quantity
-    hot_pixels: Quantity = field(default_factory=lambda: Quantity([], method="assumed", evidence="not looked for"))
+    ramp_us: Quantity = Quantity(0, None, "assumed", "not looked for")
+    hot_pixels: Quantity = Quantity((), None, "assumed", "not looked for")
+    frame_noise: Quantity = Quantity((0.002, 5e-5), None, "assumed", "not looked for")
     sensor_size: tuple[int, int] = (0, 0)
 
     @property
-    def contrast(self) -> tuple[float, float]:
-        """Both thresholds (positive, negative); they must be known."""
-        return float(self.contrast_positive.value), float(self.contrast_negative.value)
-
-    def with_contrast(self, positive: float, negative: float) -> Rig:
-        """Return the same rig with other thresholds, their methods and evidence kept."""
-        return replace(
-            self,
-            contrast_positive=replace(self.contrast_positive, value=positive),
-            contrast_negative=replace(self.contrast_negative, value=negative),
+    def contrast(self) -> Contrast:
+        """What one event means; the thresholds must be known."""
+        return Contrast(
+            float(self.contrast_positive.value), float(self.contrast_negative.value), int(self.ramp_us.value or 0)
         )
+
+    def noise(self, light: NDArray[np.float32]) -> NDArray[np.float32]:
+        """Give the standard deviation of the frames' noise at some light, any shape, linear with 1 = full scale."""
+        floor, shot = self.frame_noise.value
+        # variance = floor^2 + shot * light
+        return np.sqrt(np.float32(floor**2) + np.float32(shot) * np.maximum(light, 0))
 
 
 class RiggedEvents:

@@ -12,7 +12,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from enhance.kernels.double_integral import log_blur_ratio
-from enhance.recording import Events
+from enhance.recording import Contrast, Events
 
 
 def deblur(
@@ -21,7 +21,7 @@ def deblur(
     start_us: int,
     end_us: int,
     time_us: int,
-    contrast: tuple[float, float],
+    contrast: Contrast,
 ) -> NDArray[np.float32]:
     """Recover the sharp picture at one instant from one blurred frame.
 
@@ -30,11 +30,10 @@ def deblur(
     image : ndarray of float32, shape (H, W) or (H, W, 3)
         Linear light. Colour: every channel is changed by the same ratio, the one light changes by.
     events : Events
-        Those of the exposure (and up to `time_us`, if it lies outside).
+        Those of the exposure, up to `time_us` if it lies outside, and with a ramp those up to `ramp_us` beyond.
     start_us, end_us, time_us : int
         The exposure and the instant.
-    contrast : tuple of float
-        Thresholds, positive and negative.
+    contrast : Contrast
 
     Returns
     -------

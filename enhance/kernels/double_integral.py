@@ -11,45 +11,54 @@ from __future__ import annotations
 import numpy as np
 from numpy.typing import NDArray
 
-from enhance.kernels.event_integral import event_counts, exponential_mean
-from enhance.recording import Events
+from enhance.kernels.event_integral import event_counts, exponential_mean, part_filled
+from enhance.recording import Contrast, Events
 
 
-def log_sum(events: Events, contrast: tuple[float, float], shape: tuple[int, int]) -> NDArray[np.float64]:
-    """Log-light change of each pixel over some events.
+def log_sum(
+    events: Events, start_us: int, end_us: int, contrast: Contrast, shape: tuple[int, int]
+) -> NDArray[np.float64]:
+    """Log-light change of each pixel from one instant to another.
 
     Parameters
     ----------
     events : Events
-    contrast : tuple of float
-        Thresholds, positive and negative.
+        Those between, and with a ramp those up to `ramp_us` before and after.
+    start_us, end_us : int
+        The instants, in either order.
+    contrast : Contrast
     shape : tuple of int
         H, W.
 
     Returns
     -------
     ndarray of float64, shape (H, W)
-        ``c+ N+ - c- N-``.
+        ``c+ N+ - c- N-``, and with a ramp the part-filled thresholds at both ends.
     """
-    positive, negative = event_counts(events.x, events.y, events.polarity, shape)
-    return contrast[0] * positive - contrast[1] * negative
+    if end_us < start_us:
+        return -log_sum(events, end_us, start_us, contrast, shape)
+    seen = events.between(start_us, end_us)
+    positive, negative = event_counts(seen.x, seen.y, seen.polarity, shape)
+    change: NDArray[np.float64] = contrast.positive * positive - contrast.negative * negative
+    if contrast.ramp_us:
+        change += _filled(events, end_us, contrast, shape) - _filled(events, start_us, contrast, shape)
+    return change
 
 
 def log_blur_ratio(
-    events: Events, start_us: int, end_us: int, time_us: int, contrast: tuple[float, float], shape: tuple[int, int]
+    events: Events, start_us: int, end_us: int, time_us: int, contrast: Contrast, shape: tuple[int, int]
 ) -> NDArray[np.float64]:
     """How much brighter the average over an exposure is than one instant, in log light.
 
     Parameters
     ----------
     events : Events
-        Those of the exposure and, for an instant outside it, those between; others are ignored.
+        Those of the exposure, for an instant outside it those between, and with a ramp those up to `ramp_us` beyond.
     start_us, end_us : int
         The exposure. Equal: a sharp frame at that time.
     time_us : int
         The instant f, anywhere.
-    contrast : tuple of float
-        Thresholds, positive and negative.
+    contrast : Contrast
     shape : tuple of int
         H, W.
 
@@ -58,12 +67,18 @@ def log_blur_ratio(
     ndarray of float64, shape (H, W)
         ``ln B - ln L(f) = ln( (1/T) * integral of exp(S(t) - S(f)) dt )``.
     """
-    # ln B - ln L(f) = [ln mean(exp(S))] - S(f), both counted from the start of the exposure
-    ratio = np.zeros(shape)
-    if end_us > start_us:
-        seen = events.between(start_us, end_us)
-        mean, _ = exponential_mean(seen.t_us, seen.x, seen.y, seen.polarity, (start_us, end_us), contrast, shape)
-        ratio = np.log(mean)
-    if time_us >= start_us:
-        return ratio - log_sum(events.between(start_us, time_us), contrast, shape)
-    return ratio + log_sum(events.between(time_us, start_us), contrast, shape)
+    if end_us <= start_us:
+        return -log_sum(events, start_us, time_us, contrast, shape)
+    ramp = contrast.ramp_us
+    seen = events.between(start_us - ramp, end_us + ramp)
+    interval = (start_us, end_us)
+    mean = exponential_mean(seen.t_us, seen.x, seen.y, seen.polarity, interval, contrast.thresholds, shape, ramp)
+    # The mean counts from the last event before the exposure: what was part-filled at its start is in it already.
+    ratio = np.log(mean) - log_sum(events, start_us, time_us, contrast, shape)
+    return ratio - _filled(events, start_us, contrast, shape) if ramp else ratio
+
+
+def _filled(events: Events, time_us: int, contrast: Contrast, shape: tuple[int, int]) -> NDArray[np.float64]:
+    ramp = contrast.ramp_us
+    near = events.between(time_us - ramp, time_us + ramp)
+    return part_filled(near.t_us, near.x, near.y, near.polarity, time_us, contrast.thresholds, shape, ramp)

@@ -2,7 +2,11 @@
 
 A pixel's log light is a staircase: each event adds ``+c_positive`` or ``-c_negative``. Integrals over the exponential
 of a staircase are finite sums, so nothing here is approximated. Because a step multiplies the light by a fixed number,
-one multiplication an event replaces the exponential.
+only the events cost anything.
+
+The staircase is late: at an event the light *has arrived* at the new level; on the way there it had left the old one.
+With a ramp, light runs in a straight line (in log light) from one event to the next, or over the last `ramp_us` before
+the event where the pixel had been quiet for longer. Both forms are exact sums.
 
 References
 ----------
@@ -18,6 +22,9 @@ import numpy as np
 from numba import njit
 from numpy.typing import NDArray
 
+#: Before any event: far enough in the past for every ramp, near enough not to overflow.
+_LONG_AGO = -(2**62)
+
 
 @njit(cache=True, nogil=True)
 def _count(x, y, polarity, counts):  # type: ignore[no-untyped-def]
@@ -26,16 +33,44 @@ def _count(x, y, polarity, counts):  # type: ignore[no-untyped-def]
 
 
 @njit(cache=True, nogil=True)
-def _exponential_mean(t_us, x, y, polarity, start_us, end_us, up, down, gain, area):  # type: ignore[no-untyped-def]
+def _ramp_excess(gain, step, ramp, begin, end):  # type: ignore[no-untyped-def]
+    # integral over begin..end (counted from the ramp's start) of gain * (exp(step * u / ramp) - 1)
+    rate = step / ramp
+    return gain * ((math.exp(rate * end) - math.exp(rate * begin)) / rate - (end - begin))
+
+
+@njit(cache=True, nogil=True)
+def _exponential_mean(t_us, x, y, polarity, start_us, end_us, ramp_us, up, down, gain, area, last):  # type: ignore[no-untyped-def]
     # gain: exp(S) now; area: integral of exp(S) so far, counted as if the present gain held until the end,
     # so that an event only has to correct the rest of the exposure.
     length = end_us - start_us
     for i in range(x.size):
-        row, column = y[i], x[i]
-        before = gain[row, column]
-        after = before * (up if polarity[i] > 0 else down)
-        gain[row, column] = after
-        area[row, column] += (after - before) * (end_us - t_us[i]) / length
+        row, column, t = y[i], x[i], t_us[i]
+        step = up if polarity[i] > 0 else down
+        if ramp_us > 0:
+            ramp = min(ramp_us, t - last[row, column])
+            last[row, column] = t
+            begin, end = max(t - ramp, start_us), min(t, end_us)
+            if end > begin:
+                origin = t - ramp
+                area[row, column] += _ramp_excess(gain[row, column], step, ramp, begin - origin, end - origin) / length
+        if start_us <= t < end_us:
+            before = gain[row, column]
+            after = before * math.exp(step)
+            gain[row, column] = after
+            area[row, column] += (after - before) * (end_us - t) / length
+
+
+@njit(cache=True, nogil=True)
+def _part_filled(t_us, x, y, polarity, time_us, ramp_us, up, down, filled, last):  # type: ignore[no-untyped-def]
+    for i in range(x.size):
+        row, column, t = y[i], x[i], t_us[i]
+        before = last[row, column]
+        last[row, column] = t
+        ramp = min(ramp_us, t - before)
+        # Only the first event after the instant has a ramp that can reach back to it.
+        if t > time_us and before <= time_us and t - ramp < time_us:
+            filled[row, column] = (up if polarity[i] > 0 else down) * (time_us - (t - ramp)) / ramp
 
 
 def event_counts(
@@ -67,29 +102,69 @@ def exponential_mean(
     interval_us: tuple[int, int],
     contrast: tuple[float, float],
     shape: tuple[int, int],
-) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+    ramp_us: int = 0,
+) -> NDArray[np.float64]:
     """Mean over an interval of exp(S(t)), S being the sum of events since its start.
 
     Parameters
     ----------
     t_us, x, y, polarity : ndarray, shape (N,)
-        Events inside the interval, sorted.
+        Events, sorted: those of the interval, and with a ramp those up to `ramp_us` before and after it.
     interval_us : tuple of int
         Start and end; the end lies after the start.
     contrast : tuple of float
         Thresholds, positive and negative.
     shape : tuple of int
         H, W.
+    ramp_us : int
+        0: a staircase. Otherwise light reaches each event along a straight line in log light that begins at the
+        pixel's event before, or this long before the event if that is later.
 
     Returns
     -------
-    mean : ndarray of float64, shape (H, W)
+    ndarray of float64, shape (H, W)
         ``(1 / T) * integral of exp(S(t)) dt``.
-    gain : ndarray of float64, shape (H, W)
-        ``exp(S(end))``.
     """
-    gain = np.ones(shape)
-    area = np.ones(shape)
-    up, down = math.exp(contrast[0]), math.exp(-contrast[1])
-    _exponential_mean(t_us, x, y, polarity, interval_us[0], interval_us[1], up, down, gain, area)
-    return area, gain
+    gain, area = np.ones(shape), np.ones(shape)
+    last = np.full(shape if ramp_us else (1, 1), _LONG_AGO, np.int64)
+    start, end = interval_us
+    _exponential_mean(
+        t_us, x, y, polarity, start, end, ramp_us, float(contrast[0]), -float(contrast[1]), gain, area, last
+    )
+    return area
+
+
+def part_filled(
+    t_us: NDArray[np.int64],
+    x: NDArray[np.uint16],
+    y: NDArray[np.uint16],
+    polarity: NDArray[np.int8],
+    time_us: int,
+    contrast: tuple[float, float],
+    shape: tuple[int, int],
+    ramp_us: int,
+) -> NDArray[np.float64]:
+    """How far each pixel is on its way to its next event, in log light.
+
+    Parameters
+    ----------
+    t_us, x, y, polarity : ndarray, shape (N,)
+        Events of ``[time - ramp, time + ramp)``, sorted.
+    time_us : int
+        The instant.
+    contrast : tuple of float
+        Thresholds, positive and negative.
+    shape : tuple of int
+        H, W.
+    ramp_us : int
+        As in `exponential_mean`.
+
+    Returns
+    -------
+    ndarray of float64, shape (H, W)
+        To be added to the sum of the events up to the instant.
+    """
+    filled = np.zeros(shape)
+    last = np.full(shape, _LONG_AGO, np.int64)
+    _part_filled(t_us, x, y, polarity, time_us, ramp_us, float(contrast[0]), -float(contrast[1]), filled, last)
+    return filled

@@ -1,0 +1,298 @@
+"""The offset between the event clock and the frame clock, and the events' ramp, from the pictures alone.
+
+The blurred frames themselves say when the events belong to them: for the right offset, the events between and inside
+two exposures predict how the log light of the two *averages* differs,
+
+    ln B2 - ln B1 = ln mean_2(exp(S)) - ln mean_1(exp(S)),
+
+S being the events' sum from any common instant (the double integral of Pan et al., CVPR 2019, applied to both frames).
+A coarse search looks at the sums at the exposures' middles over a wide range; the fine one evaluates the relation
+itself. The correlation of the two sides does not depend on the thresholds' scale, which are not known yet.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from enhance.calibrate.evidence import Pair
+from enhance.kernels.double_integral import log_blur_ratio
+from enhance.recording import Contrast, EventSource
+from enhance.rig import Quantity
+
+#: How far the coarse search looks either side, microseconds.
+SEARCH_US = 2_000_000
+#: Step of the coarse search: an edge crosses a pixel in about this time in any scene that blurs.
+COARSE_STEP_US = 2_000
+#: Pairs and pixels the coarse search looks at; more do not make it surer, only slower.
+COARSE_PAIRS, COARSE_PIXELS = 8, 4_000
+#: Thresholds assumed before they are known; only their ratio matters to a correlation.
+ASSUMED_CONTRAST = (0.2, 0.2)
+#: A correlation below this is no evidence.
+LEAST_CORRELATION = 0.25
+#: A periodic scene fits at several offsets: those within this part of the best one count as equal.
+EQUAL_PEAK = 0.03
+#: Ramps tried, as parts of the exposure, and the shortest that changes anything.
+RAMPS, LEAST_RAMP_US = (32, 16, 8, 4), 200
+#: The shortest ramp within this much of the best correlation is taken, by these pairs: a longer one only adds noise.
+EQUAL_RAMP, RAMP_PAIRS = 1e-4, 6
+METHOD = "correlation of frame change and double integral"
+#: Events read at a time in the coarse search, microseconds: memory follows this, not the search range.
+PIECE_US = 100_000
+
+
+@dataclass(frozen=True)
+class Peak:
+    """A maximum of the coarse search: offset, correlation, and rivals that fit as well."""
+
+    offset_us: int
+    correlation: float
+    rivals_us: tuple[int, ...]
+
+
+def estimate_clock(
+    pairs: Sequence[Pair], events: EventSource, *, offset_known: bool = False, search_us: int = SEARCH_US
+) -> tuple[Quantity, Quantity]:
+    """Offset to add to the event clock (on top of the one `events` already carries), and the events' ramp.
+
+    Parameters
+    ----------
+    pairs : sequence of Pair
+    events : EventSource
+        Events on the frames' pixels, in a clock that is at most `search_us` off.
+    offset_known : bool
+        The clock is right as it stands; only the ramp is sought.
+    search_us : int
+        Range of the search either side.
+
+    Returns
+    -------
+    offset, ramp : Quantity
+        Microseconds; value None, with the reason, where the recording cannot tell.
+    """
+    if not pairs:
+        return _unknown("fewer than two usable keys"), _no_ramp("fewer than two usable keys")
+    peak: Peak | None = Peak(0, 1.0, ())
+    if not offset_known:
+        peak = coarse_peak(pairs, events, search_us)
+    if peak is None or peak.correlation < LEAST_CORRELATION:
+        found = "no events near the keys" if peak is None else f"best correlation only {peak.correlation:.2f}"
+        reason = f"frames and events do not move together ({found}); too little motion, or two different scenes"
+        return _unknown(reason), _no_ramp(reason)
+    return refine_clock(pairs, events, peak, offset_known)
+
+
+def coarse_peak(pairs: Sequence[Pair], events: EventSource, search_us: int) -> Peak | None:
+    """Correlate frame change with event sums over a wide range of offsets.
+
+    Parameters
+    ----------
+    pairs, events, search_us
+        As in `estimate_clock`.
+
+    Returns
+    -------
+    Peak or None
+        None where no event lies in reach.
+    """
+    strongest = sorted(pairs, key=lambda p: float(np.abs(p.change).sum()), reverse=True)[:COARSE_PAIRS]
+    steps = np.arange(-(search_us // COARSE_STEP_US), search_us // COARSE_STEP_US + 1)
+    cross, energy, observed = np.zeros(len(steps)), np.zeros(len(steps)), 0.0
+    for pair in strongest:
+        pixels, signal = _strong_pixels(pair)
+        predicted = _sums_over_offsets(pair, events, pixels, steps)
+        cross += predicted @ signal
+        energy += (predicted.astype(np.float64) ** 2).sum(axis=1)
+        observed += float(signal @ signal)
+    if not energy.any():
+        return None
+    # Little activity at the far ends of the range must not look like a good fit by its small energy.
+    floor = 0.05 * energy.max()
+    correlation = cross / np.sqrt(np.maximum(energy, floor) * observed)
+    return _choose_peak(steps * COARSE_STEP_US, correlation)
+
+
+def _choose_peak(offsets_us: NDArray[np.int64], correlation: NDArray[np.float64]) -> Peak:
+    """Best local maximum; among equals (a periodic scene) the one nearest to no offset, its rivals listed."""
+    inner = correlation[1:-1]
+    local = 1 + np.flatnonzero((inner >= correlation[:-2]) & (inner > correlation[2:]))
+    if not local.size:
+        local = np.array([int(correlation.argmax())])
+    best = correlation[local].max()
+    equal = local[correlation[local] >= best * (1 - EQUAL_PEAK)]
+    chosen = equal[np.abs(offsets_us[equal]).argmin()]
+    # Neighbouring maxima on one broad hill are one answer, not rivals.
+    rivals = tuple(int(o) for o in offsets_us[equal] if abs(o - offsets_us[chosen]) > 5 * COARSE_STEP_US)
+    return Peak(int(offsets_us[chosen]), float(correlation[chosen]), rivals)
+
+
+def _strong_pixels(pair: Pair) -> tuple[NDArray[np.int64], NDArray[np.float64]]:
+    size = np.abs(pair.change).ravel()
+    count = min(COARSE_PIXELS, size.size)
+    pixels = np.sort(np.argpartition(size, size.size - count)[-count:])
+    return pixels, pair.change.ravel()[pixels]
+
+
+def _sums_over_offsets(
+    pair: Pair, events: EventSource, pixels: NDArray[np.int64], steps: NDArray[np.int64]
+) -> NDArray[np.float32]:
+    """Event sum between the two exposures' middles for each offset, shape (offsets, pixels)."""
+    width = pair.change.shape[1]
+    slot = np.full(pair.change.size, -1, np.int32)
+    slot[pixels] = np.arange(len(pixels))
+    first, second = pair.first.time_us, pair.second.time_us
+    gap = max(1, round((second - first) / COARSE_STEP_US))
+    # Cumulative sums on a grid of steps: bin b ends at `origin + b * step`
+    bins = len(steps) + gap
+    origin = first - int(steps[-1]) * COARSE_STEP_US
+    cumulative = np.zeros((bins, len(pixels)), np.float32)
+    for piece in range(origin, origin + (bins - 1) * COARSE_STEP_US, PIECE_US):
+        seen = events.between(piece, min(piece + PIECE_US, origin + (bins - 1) * COARSE_STEP_US))
+        where = slot[seen.y.astype(np.int64) * width + seen.x]
+        inside = where >= 0
+        row = 1 + (seen.t_us[inside] - origin) // COARSE_STEP_US
+        flat = row * len(pixels) + where[inside]
+        cumulative += np.bincount(flat, seen.polarity[inside], cumulative.size).reshape(cumulative.shape)
+    np.cumsum(cumulative, axis=0, out=cumulative)
+    # An offset o moves events later by o: frame time f is event time f - o.
+    start = len(steps) - 1 - np.arange(len(steps))
+    return cumulative[start + gap] - cumulative[start]
+
+
+def refine_clock(
+    pairs: Sequence[Pair], events: EventSource, peak: Peak, offset_known: bool = False
+) -> tuple[Quantity, Quantity]:
+    """Maximise the double integral's own correlation around a coarse peak, and over the ramp.
+
+    A staircase is late by part of a threshold, which looks like a clock offset; blur tells the two apart, because the
+    ramp changes what happens *within* the exposure. Sharp frames cannot tell: there the staircase is kept, and the
+    offset holds both.
+
+    Parameters
+    ----------
+    pairs, events
+        As in `estimate_clock`.
+    peak : Peak
+    offset_known : bool
+        Leave the offset at the peak.
+
+    Returns
+    -------
+    offset, ramp : Quantity
+        The offset with the scatter over the pairs (jackknife) as its uncertainty.
+    """
+    centre = peak.offset_us
+    if not offset_known:
+        centre = _closest(pairs, events, centre, 4 * COARSE_STEP_US, 1_000, 0)
+        centre = _closest(pairs, events, centre, 1_000, 250, 0)
+    ramp = estimate_ramp(pairs, events, centre, offset_known)
+    if offset_known:
+        return Quantity(centre, None, "given"), ramp
+    ramp_us = int(ramp.value)
+    # The ramp takes over part of the delay: the optimum moves to later offsets by up to half of it.
+    centre = _closest(pairs, events, centre + ramp_us // 4, 500 + ramp_us // 2, 250, ramp_us)
+    offsets = centre + np.arange(-300, 301, 60)
+    table = np.stack([_moments(pair, events, offsets, ramp_us) for pair in pairs])
+    correlation = float(_correlation(table).max())
+    if correlation < LEAST_CORRELATION:
+        reason = f"frames and events do not move together (correlation {correlation:.2f})"
+        return _unknown(reason), _no_ramp(reason)
+    evidence = f"correlation {correlation:.3f} of frame change and double integral over {len(pairs)} pairs of keys"
+    if peak.rivals_us:
+        times = ", ".join(f"{r / 1000:.0f} ms" for r in peak.rivals_us[:4])
+        evidence += f"; a repeating scene: {times} fit as well, the smallest was taken"
+    best = round(_vertex(offsets, _correlation(table)))
+    return Quantity(best, _jackknife(offsets, table), METHOD, evidence), ramp
+
+
+def estimate_ramp(pairs: Sequence[Pair], events: EventSource, centre: int, offset_known: bool) -> Quantity:
+    """Find how long before its event a change of light begins, from blurred frames.
+
+    Parameters
+    ----------
+    pairs, events
+        As in `estimate_clock`.
+    centre : int
+        The best offset of a staircase, microseconds.
+    offset_known : bool
+        Keep that offset for every ramp.
+
+    Returns
+    -------
+    Quantity
+        Microseconds; 0, with the reason, where the frames are too sharp to tell.
+    """
+    exposure = int(np.median([pair.first.exposure_us for pair in pairs]))
+    ladder = [exposure // part for part in RAMPS if exposure // part >= LEAST_RAMP_US]
+    if not ladder:
+        return _no_ramp(f"exposures of {exposure} us are too short to tell a ramp from a clock offset")
+    strongest = sorted(pairs, key=lambda p: float(np.abs(p.change).sum()), reverse=True)[:RAMP_PAIRS]
+    reached = []
+    for ramp in (0, *ladder):
+        span = 0 if offset_known else max(500, ramp)
+        offsets = centre + np.arange(-span // 2, span + 1, max(span // 4, 1)) if span else np.array([centre])
+        table = np.stack([_moments(pair, events, offsets, ramp) for pair in strongest])
+        reached.append(float(_correlation(table).max()))
+    enough = max(reached) - EQUAL_RAMP
+    chosen = next(k for k, value in enumerate(reached) if value >= enough)
+    ramps = (0, *ladder)
+    evidence = "correlation " + ", ".join(f"{r} us {c:.4f}" for r, c in zip(ramps, reached, strict=True))
+    return Quantity(ramps[chosen], None, METHOD, evidence)
+
+
+def _closest(pairs: Sequence[Pair], events: EventSource, centre: int, reach: int, step: int, ramp_us: int) -> int:
+    offsets = centre + np.arange(-reach, reach + 1, step)
+    table = np.stack([_moments(pair, events, offsets, ramp_us) for pair in pairs])
+    return int(offsets[_correlation(table).argmax()])
+
+
+def _moments(pair: Pair, events: EventSource, offsets: NDArray[np.int64], ramp_us: int) -> NDArray[np.float64]:
+    """(cross, energy of the prediction, energy of the change) for each offset, shape (offsets, 3)."""
+    one, two = pair.first, pair.second
+    low, high = int(offsets[0]), int(offsets[-1])
+    seen = events.between(one.start_us - high - ramp_us, two.end_us - low + ramp_us)
+    shape = pair.change.shape
+    result = np.zeros((len(offsets), 3))
+    contrast = Contrast(*ASSUMED_CONTRAST, ramp_us)
+    for row, offset in enumerate(int(o) for o in offsets):
+        middle = one.time_us - offset
+        first = log_blur_ratio(seen, one.start_us - offset, one.end_us - offset, middle, contrast, shape)
+        second = log_blur_ratio(seen, two.start_us - offset, two.end_us - offset, middle, contrast, shape)
+        predicted = (second - first)[pair.usable]
+        change = pair.change[pair.usable]
+        result[row] = predicted @ change, predicted @ predicted, change @ change
+    return result
+
+
+def _correlation(table: NDArray[np.float64]) -> NDArray[np.float64]:
+    cross, energy, observed = table.sum(axis=0).T
+    return cross / np.sqrt(np.maximum(energy * observed, 1e-30))
+
+
+def _vertex(offsets: NDArray[np.int64], value: NDArray[np.float64]) -> float:
+    """Vertex of the parabola through the maximum and its neighbours."""
+    k = int(np.clip(value.argmax(), 1, len(value) - 2))
+    below, at, above = value[k - 1 : k + 2]
+    curvature = below - 2 * at + above
+    shift = 0.5 * (below - above) / curvature if curvature < 0 else 0.0
+    return float(offsets[k] + np.clip(shift, -1, 1) * (offsets[1] - offsets[0]))
+
+
+def _jackknife(offsets: NDArray[np.int64], table: NDArray[np.float64]) -> float | None:
+    """Scatter of the estimate when each pair in turn is left out; None from a single pair."""
+    count = len(table)
+    if count < 2:
+        return None
+    left_out = [_vertex(offsets, _correlation(np.delete(table, k, axis=0))) for k in range(count)]
+    return float(np.sqrt((count - 1) * np.var(left_out)))
+
+
+def _unknown(reason: str) -> Quantity:
+    return Quantity(None, None, METHOD, reason)
+
+
+def _no_ramp(reason: str) -> Quantity:
+    return Quantity(0, None, "assumed", reason)

@@ -1,0 +1,80 @@
+"""Pairs of neighbouring keys: what calibration looks at."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from enhance.light import luma
+from enhance.recording import Frame, FrameSource
+
+#: Keys looked at when the pairs with most change are chosen: decoding all of an hour would cost more than it tells.
+LOOKED_AT = 48
+#: Pairs kept. The estimates' own scatter over them is the uncertainty that is reported.
+KEPT = 12
+#: Light (1 = full scale) below which the frame's noise and level, above which its ceiling, spoil a logarithm.
+USABLE_LIGHT = (0.02, 0.97)
+
+
+@dataclass(frozen=True)
+class Pair:
+    """Two successive keys, luma of linear light.
+
+    Parameters
+    ----------
+    first, second : Frame
+        Grey.
+    usable : ndarray of bool, shape (H, W)
+        Pixels whose light is neither too dark nor clipped in both.
+    change : ndarray of float64, shape (H, W)
+        ln B2 - ln B1 less its median (a change of lamp or gain is no motion); 0 where not usable.
+    """
+
+    first: Frame
+    second: Frame
+    usable: NDArray[np.bool_]
+    change: NDArray[np.float64]
+
+
+def gather_pairs(frames: FrameSource, keys: Sequence[int]) -> list[Pair]:
+    """Choose the pairs of successive keys in which most changes.
+
+    Parameters
+    ----------
+    frames : FrameSource
+    keys : sequence of int
+        Indices of the frames that may be used; a held-out frame is not among them.
+
+    Returns
+    -------
+    list of Pair
+        In time order, at most `KEPT`.
+    """
+    count = len(keys) - 1
+    if count < 1:
+        return []
+    spread = np.unique(np.linspace(0, count - 1, min(count, LOOKED_AT)).round().astype(int))
+    strength: list[tuple[float, int]] = []
+    for k in spread:
+        pair = _pair(frames, keys[k], keys[k + 1])
+        strength.append((float(np.abs(pair.change).mean()), int(k)))
+    best = sorted(k for _, k in sorted(strength, reverse=True)[:KEPT])
+    return [_pair(frames, keys[k], keys[k + 1]) for k in best]
+
+
+def _pair(frames: FrameSource, first: int, second: int) -> Pair:
+    one, two = _grey(frames.frame(first)), _grey(frames.frame(second))
+    low, high = USABLE_LIGHT
+    usable = (one.image > low) & (one.image < high) & (two.image > low) & (two.image < high)
+    change = np.zeros(usable.shape)
+    change[usable] = np.log(two.image[usable].astype(np.float64)) - np.log(one.image[usable])
+    if usable.any():
+        change[usable] -= np.median(change[usable])
+    return Pair(one, two, usable, change)
+
+
+def _grey(frame: Frame) -> Frame:
+    return Frame(luma(frame.image), frame.start_us, frame.end_us, frame.row_time_us)

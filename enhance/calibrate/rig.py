@@ -1,0 +1,163 @@
+"""The rig of one recording: what is given, else what a rig file says, else what the recording itself tells."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import replace
+from typing import Any
+
+from enhance.calibrate.clock import estimate_clock
+from enhance.calibrate.contrast import START, estimate_contrast
+from enhance.calibrate.evidence import Pair, gather_pairs
+from enhance.calibrate.frame_noise import estimate_frame_noise
+from enhance.calibrate.hot_pixels import find_hot_pixels
+from enhance.calibrate.rig_file import read_rig
+from enhance.errors import CalibrationError
+from enhance.recording import Recording
+from enhance.rig import Quantity, Rig, RiggedEvents
+from enhance.settings import RigSettings
+
+UNKNOWN = Quantity(None, None, "not measured", "")
+
+
+def calibrate(recording: Recording, keys: Sequence[int], settings: RigSettings) -> Rig:
+    """Work out how the two sensors of a recording relate.
+
+    Parameters
+    ----------
+    recording : Recording
+    keys : sequence of int
+        Indices of the frames that may be looked at; held-out ones are not among them.
+    settings : RigSettings
+        What is given; the rest is read from its file or estimated.
+
+    Returns
+    -------
+    Rig
+        A clock that cannot be told has the value None where ``settings.unknown`` is ``frames``.
+
+    Raises
+    ------
+    CalibrationError
+        If the clock or the thresholds cannot be told, or the rig file does not fit.
+    """
+    rig = known_rig(recording, settings)
+    if rig.hot_pixels.value is None:
+        rig = replace(rig, hot_pixels=find_hot_pixels(recording.events))
+    pairs = _covered(gather_pairs(recording.frames, keys), recording, rig)
+    rig = _with_clock(rig, recording, pairs, settings)
+    if rig.offset_us.value is None:
+        return _without_clock(rig)
+    if rig.contrast_positive.value is None or rig.contrast_negative.value is None:
+        rig = _with_contrast(rig, recording, pairs)
+    if rig.frame_noise.value is None:
+        rig = replace(rig, frame_noise=estimate_frame_noise(pairs, _events(recording, rig)))
+    return rig
+
+
+def known_rig(recording: Recording, settings: RigSettings) -> Rig:
+    """Gather what is known before anything is measured: given values first, then the rig file's.
+
+    Parameters
+    ----------
+    recording : Recording
+    settings : RigSettings
+
+    Returns
+    -------
+    Rig
+        Values that must be estimated are None.
+
+    Raises
+    ------
+    CalibrationError
+        If the rig file cannot be read or does not fit.
+    """
+    size = recording.events.size
+    rig = Rig(UNKNOWN, UNKNOWN, UNKNOWN, UNKNOWN, UNKNOWN, UNKNOWN, UNKNOWN, size)
+    if settings.file is not None:
+        rig = read_rig(settings.file, size)
+    if settings.contrast is not None:
+        rig = replace(
+            rig, contrast_positive=Quantity(settings.contrast[0]), contrast_negative=Quantity(settings.contrast[1])
+        )
+    if settings.offset_us is not None:
+        rig = replace(rig, offset_us=Quantity(settings.offset_us))
+    if settings.drift_ppm is not None:
+        rig = replace(rig, drift_ppm=Quantity(settings.drift_ppm))
+    if rig.drift_ppm.value is None:
+        rig = replace(rig, drift_ppm=Quantity(0.0, None, "assumed", "drift is not estimated yet; give rig.clock"))
+    return rig
+
+
+def _events(recording: Recording, rig: Rig) -> RiggedEvents:
+    frames = recording.frames
+    height, width = frames.shape[:2]
+    return RiggedEvents(recording.events, rig, (width, height), frames.crop_origin, frames.full_size)
+
+
+def _covered(pairs: list[Pair], recording: Recording, rig: Rig) -> list[Pair]:
+    """Keep the pairs during which the sensor was recording, where the clock is known; all of them where it is not."""
+    if rig.offset_us.value is None:
+        return pairs
+    events = _events(recording, rig)
+    return [pair for pair in pairs if events.covers(pair.first.start_us, pair.second.end_us)]
+
+
+def _with_clock(rig: Rig, recording: Recording, pairs: list[Pair], settings: RigSettings) -> Rig:
+    known = rig.offset_us.value is not None
+    if known and rig.ramp_us.value is not None:
+        return rig
+    guess, how = (int(rig.offset_us.value), "") if known else _first_guess(recording)
+    provisional = replace(rig, offset_us=Quantity(guess))
+    offset, ramp = estimate_clock(pairs, _events(recording, provisional), offset_known=known)
+    if rig.ramp_us.value is None:
+        rig = replace(rig, ramp_us=ramp)
+    if known:
+        return rig
+    if offset.value is None:
+        if settings.unknown == "frames":
+            return replace(rig, offset_us=offset)
+        raise CalibrationError(
+            f"{recording.title}: the clock of the events cannot be told: {offset.evidence}. Give rig.clock "
+            f'(an offset, or "shared"), or set rig.unknown = "frames" to go on with the frames alone'
+        )
+    return replace(rig, offset_us=replace(offset, value=guess + offset.value, evidence=how + offset.evidence))
+
+
+def _first_guess(recording: Recording) -> tuple[int, str]:
+    """Offset to search around: 0, or the one that matches the starts where the two clocks do not meet at all."""
+    frames, events = recording.frames, recording.events
+    first, last = int(frames.start_us[0]), int(frames.end_us[-1])
+    if events.cover_start_us < last and first < events.cover_end_us:
+        return 0, ""
+    guess = first - events.cover_start_us
+    return guess, f"the clocks' epochs do not overlap: starts matched first ({guess} us), searched around that; "
+
+
+def _with_contrast(rig: Rig, recording: Recording, pairs: list[Pair]) -> Rig:
+    pairs = _covered(pairs, recording, rig)
+    positive, negative = estimate_contrast(pairs, _events(recording, rig), int(rig.ramp_us.value or 0))
+    found = {"contrast_positive": positive, "contrast_negative": negative}
+    for name, quantity in found.items():
+        if getattr(rig, name).value is not None:
+            continue
+        if quantity.value is None:
+            quantity = Quantity(
+                START[0], None, "assumed", f"cannot be told ({quantity.evidence}); a common value was taken"
+            )
+        rig = _with(rig, name, quantity)
+    return rig
+
+
+def _without_clock(rig: Rig) -> Rig:
+    reason = Quantity(None, None, "not measured", "the clock of the events is not known")
+    for name in ("contrast_positive", "contrast_negative", "ramp_us", "frame_noise"):
+        if getattr(rig, name).value is None:
+            rig = _with(rig, name, reason)
+    return rig
+
+
+def _with(rig: Rig, name: str, quantity: Quantity) -> Rig:
+    changes: dict[str, Any] = {name: quantity}
+    return replace(rig, **changes)

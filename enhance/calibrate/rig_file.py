@@ -1,0 +1,135 @@
+"""rig.toml: what was measured of a rig, with uncertainty, method and evidence, to be read by people and fed back in."""
+
+from __future__ import annotations
+
+import json
+import tomllib
+from pathlib import Path
+from typing import Any
+
+from enhance.errors import CalibrationError
+from enhance.rig import Quantity, Rig
+
+#: Section of the file for each quantity of a rig.
+SECTIONS = {
+    "offset_us": "clock.offset_us",
+    "drift_ppm": "clock.drift_ppm",
+    "contrast_positive": "contrast.positive",
+    "contrast_negative": "contrast.negative",
+    "ramp_us": "contrast.ramp_us",
+    "hot_pixels": "pixels.hot",
+    "frame_noise": "frames.noise",
+}
+
+
+def rig_text(rig: Rig) -> str:
+    """Write a rig as TOML.
+
+    Parameters
+    ----------
+    rig : Rig
+
+    Returns
+    -------
+    str
+        One table a quantity; a value that cannot be told is left out, its evidence says why.
+    """
+    width, height = rig.sensor_size
+    lines = [
+        "# How the event sensor and the frame camera relate: t_frame = t_event + offset + 1e-6 * drift * elapsed.",
+        "# Thresholds are in natural log units. Feed it back with rig.file.",
+        "",
+        "[sensor]",
+        f"size = [{width}, {height}]",
+    ]
+    for name, section in SECTIONS.items():
+        quantity: Quantity = getattr(rig, name)
+        lines += ["", f"[{section}]"]
+        if quantity.value is not None:
+            lines.append(f"value = {_number(quantity.value)}")
+        if quantity.uncertainty is not None:
+            lines.append(f"uncertainty = {_number(quantity.uncertainty)}")
+        # JSON strings are valid TOML basic strings
+        lines += [f"method = {json.dumps(quantity.method)}", f"evidence = {json.dumps(quantity.evidence)}"]
+    return "\n".join(lines) + "\n"
+
+
+def read_rig(path: Path, sensor_size: tuple[int, int]) -> Rig:
+    """Read a rig file.
+
+    Parameters
+    ----------
+    path : Path
+    sensor_size : tuple of int
+        Width, height of the sensor it must be for.
+
+    Returns
+    -------
+    Rig
+        Every quantity's method says that it comes from the file; what the file lacks has the value None.
+
+    Raises
+    ------
+    CalibrationError
+        If it cannot be read, is of another sensor size, or holds a value that cannot be.
+    """
+    try:
+        document = tomllib.loads(path.read_text(encoding="utf-8"))
+    except (OSError, UnicodeDecodeError, tomllib.TOMLDecodeError) as error:
+        raise CalibrationError(f"{path}: this rig file cannot be read ({error}); measure the rig anew") from error
+    size = document.get("sensor", {}).get("size") if isinstance(document.get("sensor"), dict) else None
+    if size != list(sensor_size):
+        raise CalibrationError(
+            f"{path}: this rig file is for a sensor of {size}, the events are of {list(sensor_size)} "
+            f"(width, height); use the file measured on this sensor"
+        )
+    quantities = {name: _quantity(document, name, section, path) for name, section in SECTIONS.items()}
+    return Rig(sensor_size=sensor_size, **quantities)
+
+
+def _number(value: Any) -> str:
+    if isinstance(value, list):
+        return "[" + ", ".join(_number(v) for v in value) + "]"
+    return repr(round(value, 9)) if isinstance(value, float) else str(int(value))
+
+
+def _quantity(document: dict[str, Any], name: str, section: str, path: Path) -> Quantity:
+    table: Any = document
+    for key in section.split("."):
+        table = table.get(key) if isinstance(table, dict) else None
+    if not isinstance(table, dict) or "value" not in table:
+        return Quantity(None, None, "rig file", f"{path.name} does not tell")
+    value = table["value"]
+    if not _sound(name, value):
+        raise CalibrationError(f"{path}, [{section}]: value {value!r} cannot be; expected {_EXPECTED[name]}")
+    evidence = f"{path.name}: {table.get('method', 'method not stated')}"
+    uncertainty = table.get("uncertainty")
+    return Quantity(value, float(uncertainty) if isinstance(uncertainty, (int, float)) else None, "rig file", evidence)
+
+
+_EXPECTED = {
+    "offset_us": "whole microseconds",
+    "drift_ppm": "a number between -1000 and 1000",
+    "contrast_positive": "a number between 0.01 and 2",
+    "contrast_negative": "a number between 0.01 and 2",
+    "ramp_us": "microseconds, 0 or more",
+    "hot_pixels": "a list of [x, y]",
+    "frame_noise": "two numbers, neither negative: floor and shot",
+}
+
+
+def _sound(name: str, value: Any) -> bool:
+    number = isinstance(value, (int, float)) and not isinstance(value, bool)
+    if name == "offset_us":
+        return isinstance(value, int) and number
+    if name == "drift_ppm":
+        return number and abs(value) <= 1000
+    if name.startswith("contrast"):
+        return number and 0.01 <= value <= 2
+    if name == "ramp_us":
+        return isinstance(value, int) and number and value >= 0
+    if not isinstance(value, list):
+        return False
+    if name == "frame_noise":
+        return len(value) == 2 and all(isinstance(v, (int, float)) and v >= 0 for v in value)
+    return all(isinstance(p, list) and len(p) == 2 and all(isinstance(v, int) and v >= 0 for v in p) for p in value)
