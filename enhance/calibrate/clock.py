@@ -7,18 +7,19 @@ two exposures predict how the log light of the two *averages* differs,
 
 S being the events' sum from any common instant (the double integral of Pan et al., CVPR 2019, applied to both frames).
 A coarse search looks at the sums at the exposures' middles over a wide range; the fine one evaluates the relation
-itself. The correlation of the two sides does not depend on the thresholds' scale, which are not known yet.
+itself. The correlation of the two sides does not depend on the thresholds' scale; their ratio is known by then.
 """
 
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
 
 from enhance.calibrate.evidence import Pair
+from enhance.errors import CalibrationError
 from enhance.kernels.double_integral import log_blur_ratio
 from enhance.recording import Contrast, EventSource
 from enhance.rig import Quantity
@@ -29,8 +30,6 @@ SEARCH_US = 2_000_000
 COARSE_STEP_US = 2_000
 #: Pairs and pixels the coarse search looks at; more do not make it surer, only slower.
 COARSE_PAIRS, COARSE_PIXELS = 8, 4_000
-#: Thresholds assumed before they are known; only their ratio matters to a correlation.
-ASSUMED_CONTRAST = (0.2, 0.2)
 #: A correlation below this is no evidence.
 LEAST_CORRELATION = 0.25
 #: A periodic scene fits at several offsets: those within this part of the best one count as equal.
@@ -52,37 +51,44 @@ class Peak:
     correlation: float
     rivals_us: tuple[int, ...]
 
+    @property
+    def remark(self) -> str:
+        """What is to be said of rivals; empty without any."""
+        if not self.rivals_us:
+            return ""
+        times = ", ".join(f"{rival / 1000:.0f} ms" for rival in self.rivals_us[:4])
+        return f"a repeating scene: {times} fit as well, the smallest was taken; "
 
-def estimate_clock(
-    pairs: Sequence[Pair], events: EventSource, *, offset_known: bool = False, search_us: int = SEARCH_US
-) -> tuple[Quantity, Quantity]:
-    """Offset to add to the event clock (on top of the one `events` already carries), and the events' ramp.
+
+def coarse_offset(pairs: Sequence[Pair], events: EventSource, *, search_us: int = SEARCH_US) -> Peak:
+    """Find the offset to add to the event clock (on top of the one `events` already carries) to a few milliseconds.
 
     Parameters
     ----------
     pairs : sequence of Pair
     events : EventSource
         Events on the frames' pixels, in a clock that is at most `search_us` off.
-    offset_known : bool
-        The clock is right as it stands; only the ramp is sought.
     search_us : int
         Range of the search either side.
 
     Returns
     -------
-    offset, ramp : Quantity
-        Microseconds; value None, with the reason, where the recording cannot tell.
+    Peak
+
+    Raises
+    ------
+    CalibrationError
+        If the recording cannot tell, with the reason.
     """
     if not pairs:
-        return _unknown("fewer than two usable keys"), _no_ramp("fewer than two usable keys")
-    peak: Peak | None = Peak(0, 1.0, ())
-    if not offset_known:
-        peak = coarse_peak(pairs, events, search_us)
+        raise CalibrationError("fewer than two usable keys")
+    peak = coarse_peak(pairs, events, search_us)
     if peak is None or peak.correlation < LEAST_CORRELATION:
         found = "no events near the keys" if peak is None else f"best correlation only {peak.correlation:.2f}"
-        reason = f"frames and events do not move together ({found}); too little motion, or two different scenes"
-        return _unknown(reason), _no_ramp(reason)
-    return refine_clock(pairs, events, peak, offset_known)
+        raise CalibrationError(
+            f"frames and events do not move together ({found}); too little motion, or two different scenes"
+        )
+    return peak
 
 
 def coarse_peak(pairs: Sequence[Pair], events: EventSource, search_us: int) -> Peak | None:
@@ -91,7 +97,7 @@ def coarse_peak(pairs: Sequence[Pair], events: EventSource, search_us: int) -> P
     Parameters
     ----------
     pairs, events, search_us
-        As in `estimate_clock`.
+        As in `coarse_offset`.
 
     Returns
     -------
@@ -162,10 +168,10 @@ def _sums_over_offsets(
     return cumulative[start + gap] - cumulative[start]
 
 
-def refine_clock(
-    pairs: Sequence[Pair], events: EventSource, peak: Peak, offset_known: bool = False
-) -> tuple[Quantity, Quantity]:
-    """Maximise the double integral's own correlation around a coarse peak, and over the ramp.
+def refine_offset(
+    pairs: Sequence[Pair], events: EventSource, centre: int, reach: int, contrast: Contrast
+) -> tuple[int, float | None, float]:
+    """Maximise the double integral's own correlation around a first offset.
 
     A staircase is late by part of a threshold, which looks like a clock offset; blur tells the two apart, because the
     ramp changes what happens *within* the exposure. Sharp frames cannot tell: there the staircase is kept, and the
@@ -174,49 +180,41 @@ def refine_clock(
     Parameters
     ----------
     pairs, events
-        As in `estimate_clock`.
-    peak : Peak
-    offset_known : bool
-        Leave the offset at the peak.
+        As in `coarse_offset`.
+    centre, reach : int
+        Where to look, microseconds either side.
+    contrast : Contrast
+        What one event means, as far as it is known: the two thresholds' ratio matters, their scale hardly.
 
     Returns
     -------
-    offset, ramp : Quantity
-        The offset with the scatter over the pairs (jackknife) as its uncertainty.
+    offset_us : int
+    uncertainty : float or None
+        Scatter over the pairs (jackknife).
+    correlation : float
     """
-    centre = peak.offset_us
-    if not offset_known:
-        centre = _closest(pairs, events, centre, 4 * COARSE_STEP_US, 1_000, 0)
-        centre = _closest(pairs, events, centre, 1_000, 250, 0)
-    ramp = estimate_ramp(pairs, events, centre, offset_known)
-    if offset_known:
-        return Quantity(centre, None, "given"), ramp
-    ramp_us = int(ramp.value)
-    # The ramp takes over part of the delay: the optimum moves to later offsets by up to half of it.
-    centre = _closest(pairs, events, centre + ramp_us // 4, 500 + ramp_us // 2, 250, ramp_us)
-    offsets = centre + np.arange(-300, 301, 60)
-    table = np.stack([_moments(pair, events, offsets, ramp_us) for pair in pairs])
-    correlation = float(_correlation(table).max())
-    if correlation < LEAST_CORRELATION:
-        reason = f"frames and events do not move together (correlation {correlation:.2f})"
-        return _unknown(reason), _no_ramp(reason)
-    evidence = f"correlation {correlation:.3f} of frame change and double integral over {len(pairs)} pairs of keys"
-    if peak.rivals_us:
-        times = ", ".join(f"{r / 1000:.0f} ms" for r in peak.rivals_us[:4])
-        evidence += f"; a repeating scene: {times} fit as well, the smallest was taken"
-    best = round(_vertex(offsets, _correlation(table)))
-    return Quantity(best, _jackknife(offsets, table), METHOD, evidence), ramp
+    for step in (1_000, 250, 60):
+        if step > reach:
+            continue
+        offsets = centre + np.arange(-reach // step, reach // step + 1) * step
+        table = np.stack([_moments(pair, events, offsets, contrast) for pair in pairs])
+        centre, reach = int(offsets[_correlation(table).argmax()]), 4 * step
+    return round(_vertex(offsets, _correlation(table))), _jackknife(offsets, table), float(_correlation(table).max())
 
 
-def estimate_ramp(pairs: Sequence[Pair], events: EventSource, centre: int, offset_known: bool) -> Quantity:
+def estimate_ramp(
+    pairs: Sequence[Pair], events: EventSource, centre: int, contrast: Contrast, *, offset_known: bool
+) -> Quantity:
     """Find how long before its event a change of light begins, from blurred frames.
 
     Parameters
     ----------
     pairs, events
-        As in `estimate_clock`.
+        As in `coarse_offset`.
     centre : int
         The best offset of a staircase, microseconds.
+    contrast : Contrast
+        The thresholds, as far as they are known.
     offset_known : bool
         Keep that offset for every ramp.
 
@@ -225,38 +223,31 @@ def estimate_ramp(pairs: Sequence[Pair], events: EventSource, centre: int, offse
     Quantity
         Microseconds; 0, with the reason, where the frames are too sharp to tell.
     """
-    exposure = int(np.median([pair.first.exposure_us for pair in pairs]))
-    ladder = [exposure // part for part in RAMPS if exposure // part >= LEAST_RAMP_US]
-    if not ladder:
-        return _no_ramp(f"exposures of {exposure} us are too short to tell a ramp from a clock offset")
+    exposure = int(np.median([pair.first.exposure_us for pair in pairs])) if pairs else 0
+    ramps = [0, *(exposure // part for part in RAMPS if exposure // part >= LEAST_RAMP_US)]
+    if len(ramps) == 1:
+        return Quantity(0, None, "assumed", f"exposures of {exposure} us cannot tell a ramp from a clock offset")
     strongest = sorted(pairs, key=lambda p: float(np.abs(p.change).sum()), reverse=True)[:RAMP_PAIRS]
     reached = []
-    for ramp in (0, *ladder):
-        span = 0 if offset_known else max(500, ramp)
-        offsets = centre + np.arange(-span // 2, span + 1, max(span // 4, 1)) if span else np.array([centre])
-        table = np.stack([_moments(pair, events, offsets, ramp) for pair in strongest])
+    for ramp in ramps:
+        # A ramp takes over part of the delay: the best offset moves later, by half of it at the most.
+        reach = [0] if offset_known else range(-500, 501 + ramp // 2, 250)
+        offsets = centre + np.array(reach, dtype=np.int64)
+        with_ramp = replace(contrast, ramp_us=ramp)
+        table = np.stack([_moments(pair, events, offsets, with_ramp) for pair in strongest])
         reached.append(float(_correlation(table).max()))
-    enough = max(reached) - EQUAL_RAMP
-    chosen = next(k for k, value in enumerate(reached) if value >= enough)
-    ramps = (0, *ladder)
+    chosen = next(k for k, value in enumerate(reached) if value >= max(reached) - EQUAL_RAMP)
     evidence = "correlation " + ", ".join(f"{r} us {c:.4f}" for r, c in zip(ramps, reached, strict=True))
     return Quantity(ramps[chosen], None, METHOD, evidence)
 
 
-def _closest(pairs: Sequence[Pair], events: EventSource, centre: int, reach: int, step: int, ramp_us: int) -> int:
-    offsets = centre + np.arange(-reach, reach + 1, step)
-    table = np.stack([_moments(pair, events, offsets, ramp_us) for pair in pairs])
-    return int(offsets[_correlation(table).argmax()])
-
-
-def _moments(pair: Pair, events: EventSource, offsets: NDArray[np.int64], ramp_us: int) -> NDArray[np.float64]:
+def _moments(pair: Pair, events: EventSource, offsets: NDArray[np.int64], contrast: Contrast) -> NDArray[np.float64]:
     """(cross, energy of the prediction, energy of the change) for each offset, shape (offsets, 3)."""
     one, two = pair.first, pair.second
-    low, high = int(offsets[0]), int(offsets[-1])
+    low, high, ramp_us = int(offsets[0]), int(offsets[-1]), contrast.ramp_us
     seen = events.between(one.start_us - high - ramp_us, two.end_us - low + ramp_us)
     shape = pair.change.shape
     result = np.zeros((len(offsets), 3))
-    contrast = Contrast(*ASSUMED_CONTRAST, ramp_us)
     for row, offset in enumerate(int(o) for o in offsets):
         middle = one.time_us - offset
         first = log_blur_ratio(seen, one.start_us - offset, one.end_us - offset, middle, contrast, shape)
@@ -288,11 +279,3 @@ def _jackknife(offsets: NDArray[np.int64], table: NDArray[np.float64]) -> float 
         return None
     left_out = [_vertex(offsets, _correlation(np.delete(table, k, axis=0))) for k in range(count)]
     return float(np.sqrt((count - 1) * np.var(left_out)))
-
-
-def _unknown(reason: str) -> Quantity:
-    return Quantity(None, None, METHOD, reason)
-
-
-def _no_ramp(reason: str) -> Quantity:
-    return Quantity(0, None, "assumed", reason)

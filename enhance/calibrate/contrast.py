@@ -39,7 +39,9 @@ Rows = tuple[NDArray[np.float64], NDArray[np.float64]]
 METHOD = "regression between deblurred keys"
 
 
-def estimate_contrast(pairs: Sequence[Pair], events: EventSource, ramp_us: int = 0) -> tuple[Quantity, Quantity]:
+def estimate_contrast(
+    pairs: Sequence[Pair], events: EventSource, ramp_us: int = 0, start: tuple[float, float] = START
+) -> tuple[Quantity, Quantity]:
     """Estimate both contrast thresholds.
 
     Parameters
@@ -49,13 +51,15 @@ def estimate_contrast(pairs: Sequence[Pair], events: EventSource, ramp_us: int =
         Events in the frames' clock and on the frames' pixels.
     ramp_us : int
         The events' ramp.
+    start : tuple of float
+        Thresholds to begin with.
 
     Returns
     -------
     positive, negative : Quantity
         Value None, with the reason, where the recording cannot tell.
     """
-    contrast = START
+    contrast = start
     rows: list[Rows] = []
     for _ in range(ROUNDS):
         rows = [_equations(pair, events, Contrast(*contrast, ramp_us)) for pair in pairs]
@@ -135,5 +139,4 @@ def _solve(rows: Sequence[Rows]) -> tuple[NDArray[np.float64], NDArray[np.float6
 def _normal(A: NDArray[np.float64], b: NDArray[np.float64], weight: NDArray[np.float64]) -> NDArray[np.float64]:
     """Weighted normal equations; a column that is all zero (one sign only) gets a zero."""
     weighted = A * weight[:, None]
-    fit: NDArray[np.float64] = np.linalg.lstsq(A.T @ weighted, weighted.T @ b, rcond=None)[0]
-    return fit
+    return np.asarray(np.linalg.lstsq(A.T @ weighted, weighted.T @ b, rcond=None)[0], dtype=np.float64)

@@ -6,14 +6,14 @@ from collections.abc import Sequence
 from dataclasses import replace
 from typing import Any
 
-from enhance.calibrate.clock import estimate_clock
+from enhance.calibrate.clock import METHOD, coarse_offset, estimate_ramp, refine_offset
 from enhance.calibrate.contrast import START, estimate_contrast
 from enhance.calibrate.evidence import Pair, gather_pairs
 from enhance.calibrate.frame_noise import estimate_frame_noise
 from enhance.calibrate.hot_pixels import find_hot_pixels
 from enhance.calibrate.rig_file import read_rig
 from enhance.errors import CalibrationError
-from enhance.recording import Recording
+from enhance.recording import Contrast, Recording
 from enhance.rig import Quantity, Rig, RiggedEvents
 from enhance.settings import RigSettings
 
@@ -105,24 +105,57 @@ def _covered(pairs: list[Pair], recording: Recording, rig: Rig) -> list[Pair]:
 
 
 def _with_clock(rig: Rig, recording: Recording, pairs: list[Pair], settings: RigSettings) -> Rig:
-    known = rig.offset_us.value is not None
-    if known and rig.ramp_us.value is not None:
-        return rig
-    guess, how = (int(rig.offset_us.value), "") if known else _first_guess(recording)
-    provisional = replace(rig, offset_us=Quantity(guess))
-    offset, ramp = estimate_clock(pairs, _events(recording, provisional), offset_known=known)
-    if rig.ramp_us.value is None:
-        rig = replace(rig, ramp_us=ramp)
-    if known:
-        return rig
-    if offset.value is None:
-        if settings.unknown == "frames":
-            return replace(rig, offset_us=offset)
+    if rig.offset_us.value is not None:
+        return _with_ramp(rig, recording, pairs)
+    guess, how = _first_guess(recording)
+    try:
+        peak = coarse_offset(pairs, _events(recording, replace(rig, offset_us=Quantity(guess))))
+    except CalibrationError as error:
+        unknown = Quantity(None, None, METHOD, str(error))
+        # One frame makes no clip; as it was captured it is still worth a picture.
+        if settings.unknown == "frames" or len(recording.frames) == 1:
+            return replace(rig, offset_us=unknown)
         raise CalibrationError(
-            f"{recording.title}: the clock of the events cannot be told: {offset.evidence}. Give rig.clock "
+            f"{recording.title}: the clock of the events cannot be told: {error}. Give rig.clock "
             f'(an offset, or "shared"), or set rig.unknown = "frames" to go on with the frames alone'
-        )
-    return replace(rig, offset_us=replace(offset, value=guess + offset.value, evidence=how + offset.evidence))
+        ) from error
+    return _refined(rig, recording, pairs, guess + peak.offset_us, how + peak.remark)
+
+
+def _with_ramp(rig: Rig, recording: Recording, pairs: list[Pair]) -> Rig:
+    if rig.ramp_us.value is not None:
+        return rig
+    contrast = _contrast(rig, recording, pairs, 0)
+    ramp = estimate_ramp(pairs, _events(recording, rig), 0, contrast, offset_known=True)
+    return replace(rig, ramp_us=ramp)
+
+
+def _refined(rig: Rig, recording: Recording, pairs: list[Pair], first_us: int, remark: str) -> Rig:
+    """Bring clock, thresholds and ramp to agree, each with the best of the others so far."""
+    rig = replace(rig, offset_us=Quantity(first_us))
+    start = Contrast(*START)
+    offset, _, _ = refine_offset(pairs, _events(recording, rig), 0, 8_000, start)
+    rig = replace(rig, offset_us=Quantity(first_us + offset))
+    contrast = _contrast(rig, recording, pairs, 0)
+    offset, _, _ = refine_offset(pairs, _events(recording, rig), 0, 2_000, contrast)
+    rig = replace(rig, offset_us=Quantity(rig.offset_us.value + offset))
+    if rig.ramp_us.value is None:
+        ramp = estimate_ramp(pairs, _events(recording, rig), 0, contrast, offset_known=False)
+        rig = replace(rig, ramp_us=ramp)
+    contrast = _contrast(rig, recording, pairs, int(rig.ramp_us.value))
+    reach = 1_000 + int(rig.ramp_us.value) // 2
+    offset, uncertainty, correlation = refine_offset(pairs, _events(recording, rig), 0, reach, contrast)
+    evidence = f"{remark}correlation {correlation:.3f} over {len(pairs)} pairs of keys"
+    return replace(rig, offset_us=Quantity(rig.offset_us.value + offset, uncertainty, METHOD, evidence))
+
+
+def _contrast(rig: Rig, recording: Recording, pairs: list[Pair], ramp_us: int) -> Contrast:
+    """Thresholds as far as they are known or can be told with this clock, for the search of the clock itself."""
+    found = [rig.contrast_positive.value, rig.contrast_negative.value]
+    if None in found:
+        told = estimate_contrast(_covered(pairs, recording, rig), _events(recording, rig), ramp_us)
+        found = [known or q.value or s for known, q, s in zip(found, told, START, strict=True)]
+    return Contrast(float(found[0]), float(found[1]), ramp_us)
 
 
 def _first_guess(recording: Recording) -> tuple[int, str]:

@@ -14,8 +14,9 @@ COMPARE_PIXELS = 5
 #: Squared signal difference (0 to 1) that is still plain noise; it keeps two good candidates at equal weights.
 NOISE = np.float32(1e-3)
 #: Share of warps that fit: half, since the carried picture's errors are of another kind and so cancel. It sinks where
-#: even the best warp is this far (squared signal difference) from what the events tell.
-WARPED, MISFIT = np.float32(0.5), np.float32(0.01)
+#: even the best warp is further (squared signal difference) from what the events tell than this, and than the two
+#: carried pictures, which should agree, are from each other.
+WARPED, MISFIT, DISAGREEMENT = np.float32(0.5), np.float32(0.01), np.float32(3)
 
 
 def fit_of_warps(candidates: Candidates) -> tuple[NDArray[np.float32], NDArray[np.float32]]:
@@ -41,7 +42,8 @@ def fit_of_warps(candidates: Candidates) -> tuple[NDArray[np.float32], NDArray[n
     # 1 / e^2: a warp that is off by twice as much counts a quarter
     weight = np.reciprocal(np.square(distance + NOISE))
     weight /= weight.sum(axis=0)
-    return weight, WARPED * MISFIT / (MISFIT + (weight * distance).sum(axis=0))
+    allowed = MISFIT + DISAGREEMENT * cv2.GaussianBlur((signal[0] - signal[1]) ** 2, window, 0)
+    return weight, WARPED * allowed / (allowed + (weight * distance).sum(axis=0))
 
 
 def carried_blend(candidates: Candidates, stack: NDArray[np.float32]) -> NDArray[np.float32]:

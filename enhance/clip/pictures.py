@@ -1,0 +1,77 @@
+"""Pictures of one pass at any instant between its first and last key."""
+
+from __future__ import annotations
+
+from bisect import bisect_right
+from collections import OrderedDict
+from typing import TYPE_CHECKING
+
+from enhance.clip.keys import Keys, _kept
+from enhance.interpolate import Span, analytic_blend, with_colour
+from enhance.kernels.optical_flow import flow_between, moved_blend
+from enhance.recording import By, Kind, Picture
+
+if TYPE_CHECKING:
+    from enhance.interpolate.network import FusionNetwork
+
+
+class Pictures:
+    """Makes pictures from keys; what belongs to a span is prepared once.
+
+    Parameters
+    ----------
+    keys : Keys
+    network : FusionNetwork or None
+        None: the analytic blend.
+    """
+
+    def __init__(self, keys: Keys, network: FusionNetwork | None) -> None:
+        self.keys, self.network = keys, network
+        self._spans: OrderedDict[int, Span] = OrderedDict()
+        self._flows: OrderedDict[int, tuple] = OrderedDict()
+
+    def at(self, time_us: int) -> Picture:
+        """Make the picture of one instant.
+
+        Parameters
+        ----------
+        time_us : int
+            Not before the first key, not after the last.
+
+        Returns
+        -------
+        Picture
+            A key's own where the instant is its time.
+        """
+        times = self.keys.times_us
+        key = bisect_right(times, time_us) - 1
+        if times[key] == time_us:
+            return self.keys.picture(key)
+        if not self.keys.span_covered(key):
+            return Picture(self._by_frames(key, time_us), time_us, Kind.INSERTED, By.FRAMES)
+        span = self.span(key)
+        candidates = span.at(time_us)
+        if self.network is None:
+            return Picture(
+                with_colour(analytic_blend(candidates), span, candidates), time_us, Kind.INSERTED, By.INTEGRAL
+            )
+        from enhance.interpolate.network import fuse
+
+        light = fuse(self.network, candidates)
+        return Picture(with_colour(light, span, candidates), time_us, Kind.INSERTED, By.NETWORK)
+
+    def span(self, key: int) -> Span:
+        """Prepare the span from a key to the next, which the events must cover."""
+        return _kept(self._spans, key, lambda: self._span(key), 2)
+
+    def _span(self, key: int) -> Span:
+        interval = (self.keys.times_us[key], self.keys.times_us[key + 1])
+        left, right = self.keys.picture(key).image, self.keys.picture(key + 1).image
+        return Span(left, right, interval, self.keys.span_events(key), self.keys.rig.contrast)
+
+    def _by_frames(self, key: int, time_us: int):  # type: ignore[no-untyped-def]
+        """Move the keys by their own flow: no event tells anything here."""
+        left, right = self.keys.picture(key).image, self.keys.picture(key + 1).image
+        flows = _kept(self._flows, key, lambda: (flow_between(left, right), flow_between(right, left)), 2)
+        start, end = self.keys.times_us[key], self.keys.times_us[key + 1]
+        return moved_blend(left, right, *flows, (time_us - start) / (end - start))
