@@ -68,8 +68,9 @@ def _part_filled(t_us, x, y, polarity, time_us, ramp_us, up, down, filled, last)
         before = last[row, column]
         last[row, column] = t
         ramp = min(ramp_us, t - before)
-        # Only the first event after the instant has a ramp that can reach back to it.
-        if t > time_us and before <= time_us and t - ramp < time_us:
+        # Only the first event from the instant on has a ramp that can reach back to it. One exactly at the instant
+        # belongs to the interval that begins there: the light has arrived, but no sum up to here has counted it.
+        if t >= time_us and before < time_us and t - ramp < time_us:
             filled[row, column] = (up if polarity[i] > 0 else down) * (time_us - (t - ramp)) / ramp
 
 

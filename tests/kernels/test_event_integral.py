@@ -88,9 +88,10 @@ def test_part_filled_is_the_light_between_two_events():
     ramp, c = 1_500, (0.2, 0.3)
     t = np.sort(rng.choice(np.arange(1_000, 12_000), 20, replace=False))
     p = rng.choice([-1, 1], 20)
-    for time in range(500, 12_500, 333):
+    # some of the instants are those of events: half-open, such an event is not summed but wholly filled
+    for time in [*range(500, 12_500, 333), *(int(k) for k in t)]:
         near = (t >= time - ramp) & (t < time + ramp)
-        steps = sum(c[0] if k > 0 else -c[1] for k, ti in zip(p, t, strict=True) if ti <= time)
+        steps = sum(c[0] if k > 0 else -c[1] for k, ti in zip(p, t, strict=True) if ti < time)
         expected = ramped_light(t, p, np.array([float(time)]), c, ramp)[0]
         filled = part_filled(*columns(t[near], p[near]), time, c, (1, 1), ramp)
         assert np.isclose(steps + filled[0, 0], expected, atol=1e-12)
