@@ -49,8 +49,7 @@ def rig_text(rig: Rig) -> str:
             lines.append(f"value = {_number(quantity.value)}")
         if quantity.uncertainty is not None:
             lines.append(f"uncertainty = {_number(quantity.uncertainty)}")
-        # JSON strings are valid TOML basic strings
-        lines += [f"method = {json.dumps(quantity.method)}", f"evidence = {json.dumps(quantity.evidence)}"]
+        lines += [f"method = {_text(quantity.method)}", f"evidence = {_text(quantity.evidence)}"]
     return "\n".join(lines) + "\n"
 
 
@@ -84,13 +83,24 @@ def read_rig(path: Path, sensor_size: tuple[int, int]) -> Rig:
             f"(width, height); use the file measured on this sensor"
         )
     quantities = {name: _quantity(document, name, section, path) for name, section in SECTIONS.items()}
+    outside = [p for p in quantities["hot_pixels"].value or [] if p[0] >= sensor_size[0] or p[1] >= sensor_size[1]]
+    if outside:
+        raise CalibrationError(
+            f"{path}, [{SECTIONS['hot_pixels']}]: pixel {outside[0]} lies outside the sensor of {list(sensor_size)}; "
+            f"expected 0 <= x < width and 0 <= y < height; mend the file or measure the rig anew"
+        )
     return Rig(sensor_size=sensor_size, **quantities)
 
 
+def _text(text: str) -> str:
+    """Quote a text; a JSON string is a TOML string but for surrogates and the delete character."""
+    return json.dumps(text.encode("utf-8", "replace").decode(), ensure_ascii=False).replace("\x7f", "\\u007f")
+
+
 def _number(value: Any) -> str:
-    if isinstance(value, list):
+    if isinstance(value, (list, tuple)):
         return "[" + ", ".join(_number(v) for v in value) + "]"
-    return repr(round(value, 9)) if isinstance(value, float) else str(int(value))
+    return repr(round(float(value), 9)) if isinstance(value, float) else str(int(value))
 
 
 def _quantity(document: dict[str, Any], name: str, section: str, path: Path) -> Quantity:
@@ -101,7 +111,10 @@ def _quantity(document: dict[str, Any], name: str, section: str, path: Path) -> 
         return Quantity(None, None, "rig file", f"{path.name} does not tell")
     value = table["value"]
     if not _sound(name, value):
-        raise CalibrationError(f"{path}, [{section}]: value {value!r} cannot be; expected {_EXPECTED[name]}")
+        raise CalibrationError(
+            f"{path}, [{section}]: value {value!r} cannot be; expected {_EXPECTED[name]}; "
+            f"mend the file or measure the rig anew"
+        )
     evidence = f"{path.name}: {table.get('method', 'method not stated')}"
     uncertainty = table.get("uncertainty")
     return Quantity(value, float(uncertainty) if isinstance(uncertainty, (int, float)) else None, "rig file", evidence)
@@ -114,7 +127,7 @@ _EXPECTED = {
     "contrast_negative": "a number between 0.01 and 2",
     "ramp_us": "microseconds, 0 or more",
     "hot_pixels": "a list of [x, y]",
-    "frame_noise": "two numbers, neither negative: floor and shot",
+    "frame_noise": "two numbers from 0 to 1: floor and shot",
 }
 
 
@@ -131,5 +144,5 @@ def _sound(name: str, value: Any) -> bool:
     if not isinstance(value, list):
         return False
     if name == "frame_noise":
-        return len(value) == 2 and all(isinstance(v, (int, float)) and v >= 0 for v in value)
+        return len(value) == 2 and all(isinstance(v, (int, float)) and 0 <= v <= 1 for v in value)
     return all(isinstance(p, list) and len(p) == 2 and all(isinstance(v, int) and v >= 0 for v in p) for p in value)
