@@ -18,7 +18,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 from numpy.typing import NDArray
 
-from enhance.calibrate.evidence import Pair
+from enhance.calibrate.evidence import LONGEST_US, Pair
 from enhance.errors import CalibrationError
 from enhance.kernels.double_integral import log_blur_ratio
 from enhance.recording import Contrast, EventSource
@@ -39,8 +39,8 @@ RAMPS, LEAST_RAMP_US = (32, 16, 8, 4), 200
 #: The shortest ramp within this much of the best correlation is taken, by these pairs: a longer one only adds noise.
 EQUAL_RAMP, RAMP_PAIRS = 1e-4, 6
 METHOD = "correlation of frame change and double integral"
-#: Events read at a time in the coarse search, microseconds: memory follows this, not the search range.
-PIECE_US = 100_000
+#: Steps whose events are read at a time in the coarse search: memory follows this, not the search range.
+PIECE_BINS = 50
 
 
 @dataclass(frozen=True)
@@ -81,10 +81,12 @@ def coarse_offset(pairs: Sequence[Pair], events: EventSource, *, search_us: int 
         If the recording cannot tell, with the reason.
     """
     if not pairs:
-        raise CalibrationError("fewer than two usable keys")
+        raise CalibrationError(f"no two successive keys within {LONGEST_US / 1e6:g} s of each other")
     peak = coarse_peak(pairs, events, search_us)
     if peak is None or peak.correlation < LEAST_CORRELATION:
-        found = "no events near the keys" if peak is None else f"best correlation only {peak.correlation:.2f}"
+        still = not any(pair.change.any() for pair in pairs)
+        nothing = "no usable pixel of the frames changes" if still else "no events near the keys"
+        found = nothing if peak is None else f"best correlation only {peak.correlation:.2f}"
         raise CalibrationError(
             f"frames and events do not move together ({found}); too little motion, or two different scenes"
         )
@@ -102,7 +104,7 @@ def coarse_peak(pairs: Sequence[Pair], events: EventSource, search_us: int) -> P
     Returns
     -------
     Peak or None
-        None where no event lies in reach.
+        None where no event lies in reach, or no usable pixel changes.
     """
     strongest = sorted(pairs, key=lambda p: float(np.abs(p.change).sum()), reverse=True)[:COARSE_PAIRS]
     steps = np.arange(-(search_us // COARSE_STEP_US), search_us // COARSE_STEP_US + 1)
@@ -113,7 +115,7 @@ def coarse_peak(pairs: Sequence[Pair], events: EventSource, search_us: int) -> P
         cross += predicted @ signal
         energy += (predicted.astype(np.float64) ** 2).sum(axis=1)
         observed += float(signal @ signal)
-    if not energy.any():
+    if not energy.any() or not observed:
         return None
     # Little activity at the far ends of the range must not look like a good fit by its small energy.
     floor = 0.05 * energy.max()
@@ -155,13 +157,14 @@ def _sums_over_offsets(
     bins = len(steps) + gap
     origin = first - int(steps[-1]) * COARSE_STEP_US
     cumulative = np.zeros((bins, len(pixels)), np.float32)
-    for piece in range(origin, origin + (bins - 1) * COARSE_STEP_US, PIECE_US):
-        seen = events.between(piece, min(piece + PIECE_US, origin + (bins - 1) * COARSE_STEP_US))
+    for first_bin in range(1, bins, PIECE_BINS):
+        part = cumulative[first_bin : first_bin + PIECE_BINS]
+        start_us = origin + (first_bin - 1) * COARSE_STEP_US
+        seen = events.between(start_us, start_us + len(part) * COARSE_STEP_US)
         where = slot[seen.y.astype(np.int64) * width + seen.x]
         inside = where >= 0
-        row = 1 + (seen.t_us[inside] - origin) // COARSE_STEP_US
-        flat = row * len(pixels) + where[inside]
-        cumulative += np.bincount(flat, seen.polarity[inside], cumulative.size).reshape(cumulative.shape)
+        flat = (seen.t_us[inside] - start_us) // COARSE_STEP_US * len(pixels) + where[inside]
+        part += np.bincount(flat, seen.polarity[inside], part.size).reshape(part.shape)
     np.cumsum(cumulative, axis=0, out=cumulative)
     # An offset o moves events later by o: frame time f is event time f - o.
     start = len(steps) - 1 - np.arange(len(steps))

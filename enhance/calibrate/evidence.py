@@ -15,6 +15,8 @@ from enhance.recording import Frame, FrameSource
 LOOKED_AT = 48
 #: Pairs kept. The estimates' own scatter over them is the uncertainty that is reported.
 KEPT = 12
+#: Keys further apart (over dropped frames) are no pair: events and search would take memory as the gap grows.
+LONGEST_US = 2_000_000
 #: Light (1 = full scale) below which the frame's noise and level, above which its ceiling, spoil a logarithm.
 USABLE_LIGHT = (0.02, 0.97)
 
@@ -53,10 +55,10 @@ def gather_pairs(frames: FrameSource, keys: Sequence[int]) -> list[Pair]:
     list of Pair
         In time order, at most `KEPT`.
     """
-    count = len(keys) - 1
-    if count < 1:
+    near = [k for k in range(len(keys) - 1) if frames.end_us[keys[k + 1]] - frames.start_us[keys[k]] <= LONGEST_US]
+    if not near:
         return []
-    spread = np.unique(np.linspace(0, count - 1, min(count, LOOKED_AT)).round().astype(int))
+    spread = np.asarray(near)[np.unique(np.linspace(0, len(near) - 1, min(len(near), LOOKED_AT)).round().astype(int))]
     strength: list[tuple[float, int]] = []
     for k in spread:
         pair = _pair(frames, keys[k], keys[k + 1])

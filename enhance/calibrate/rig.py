@@ -51,7 +51,9 @@ def calibrate(recording: Recording, keys: Sequence[int], settings: RigSettings) 
     if rig.contrast_positive.value is None or rig.contrast_negative.value is None:
         rig = _with_contrast(rig, recording, pairs)
     if rig.frame_noise.value is None:
-        rig = replace(rig, frame_noise=estimate_frame_noise(pairs, _events(recording, rig)))
+        # Where the sensor did not record, a pixel without events need not be quiet.
+        told = estimate_frame_noise(_covered(pairs, recording, rig), _events(recording, rig))
+        rig = replace(rig, frame_noise=told)
     return rig
 
 
