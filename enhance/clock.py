@@ -178,8 +178,9 @@ class ClockMap:
         """Map event times, shape (N,), to the frame clock, floored; order is kept."""
         if self.drift_ppm == 0.0:
             return event_us + self.offset_us
-        # The drift term alone is a float: epoch-sized integers never pass through one.
-        drift = np.floor(1e-6 * self.drift_ppm * (event_us - self.first_event_us)).astype(np.int64)
+        # The drift term alone is a float: epoch-sized integers never pass through one. Divided, not multiplied by 1e-6,
+        # which is no exact float: a whole number of microseconds stays whole.
+        drift = np.floor(self.drift_ppm * (event_us - self.first_event_us) / 1e6).astype(np.int64)
         return event_us + self.offset_us + drift
 
     def to_event(self, frame_us: int) -> int:
