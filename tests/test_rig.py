@@ -1,0 +1,116 @@
+"""Events moved into the frames' world: clock, crop, bad pixels."""
+
+import numpy as np
+import pytest
+
+from enhance.recording import EventArray, Events
+from enhance.rig import Quantity, Rig, RiggedEvents
+
+WIDTH, HEIGHT = 12, 10
+EPOCH_US = 1_589_163_147_364_965
+
+
+def rig(offset=0, drift=0.0, hot=()):
+    return Rig(
+        Quantity(offset), Quantity(drift), Quantity(0.2), Quantity(0.3), Quantity(0), Quantity([list(p) for p in hot])
+    )
+
+
+def everywhere(start=0, step=10):
+    """One event a pixel, row by row, `step` apart."""
+    y, x = np.divmod(np.arange(WIDTH * HEIGHT), WIDTH)
+    t = start + step * np.arange(WIDTH * HEIGHT, dtype=np.int64)
+    events = Events(t, x.astype(np.uint16), y.astype(np.uint16), np.where(x % 2, 1, -1).astype(np.int8))
+    return EventArray(events, (WIDTH, HEIGHT), cover=(start - 100, start + 5000))
+
+
+def all_of(events):
+    return events.between(events.cover_start_us, events.cover_end_us)
+
+
+@pytest.mark.parametrize(("start", "offset"), [(0, 0), (0, 6_700), (EPOCH_US, -EPOCH_US), (-500, EPOCH_US)])
+def test_an_offset_moves_times_cover_and_windows_alike(start, offset):
+    source = everywhere(start)
+    events = RiggedEvents(source, rig(offset), (WIDTH, HEIGHT))
+    np.testing.assert_array_equal(all_of(events).t_us, source.events.t_us + offset)
+    assert (events.first_us, events.last_us) == (source.first_us + offset, source.last_us + offset)
+    assert (events.cover_start_us, events.cover_end_us) == (start - 100 + offset, start + 5000 + offset)
+    assert events.count == source.count == events.count_between(events.cover_start_us, events.cover_end_us)
+
+
+@pytest.mark.parametrize("drift", [-1000.0, -80.0, 35.5, 1000.0])
+def test_under_drift_neighbouring_windows_still_share_out_all_events(drift):
+    source = everywhere(EPOCH_US, step=7)
+    events = RiggedEvents(source, rig(-EPOCH_US + 3, drift), (WIDTH, HEIGHT))
+    # t_frame = t_event + offset + 1e-6 drift (t_event - t_first_event), floored
+    elapsed = source.events.t_us - EPOCH_US
+    expected = elapsed + 3 + np.floor(drift * elapsed / 1e6).astype(np.int64)
+    np.testing.assert_array_equal(all_of(events).t_us, expected)
+    borders = list(range(0, 1000, 13))
+    parts = [events.between(a, b) for a, b in zip(borders[:-1], borders[1:], strict=True)]
+    for part, a, b in zip(parts, borders[:-1], borders[1:], strict=True):
+        assert ((part.t_us >= a) & (part.t_us < b)).all()
+    assert sum(len(part) for part in parts) == WIDTH * HEIGHT
+
+
+def test_windows_are_half_open_in_the_frame_clock():
+    events = RiggedEvents(everywhere(), rig(5), (WIDTH, HEIGHT))
+    assert events.between(15, 25).t_us.tolist() == [15]
+    assert events.between(16, 26).t_us.tolist() == [25]
+    assert len(events.between(25, 25)) == 0
+
+
+def test_cover_says_whether_the_sensor_recorded_all_through():
+    events = RiggedEvents(everywhere(), rig(1_000), (WIDTH, HEIGHT))
+    assert events.covers(900, 6_000)
+    assert not events.covers(899, 2_000)
+    assert not events.covers(2_000, 6_001)
+
+
+def test_a_sensor_of_the_whole_frames_size_is_cropped_with_it():
+    source = everywhere()
+    events = RiggedEvents(source, rig(), (5, 4), crop_origin=(3, 2), full_size=(WIDTH, HEIGHT))
+    seen = all_of(events)
+    whole = source.events
+    inside = (whole.x >= 3) & (whole.x < 8) & (whole.y >= 2) & (whole.y < 6)
+    np.testing.assert_array_equal(seen.x, whole.x[inside] - 3)
+    np.testing.assert_array_equal(seen.y, whole.y[inside] - 2)
+    np.testing.assert_array_equal(seen.t_us, whole.t_us[inside])
+    np.testing.assert_array_equal(seen.polarity, whole.polarity[inside])
+    assert [c.dtype for c in (seen.t_us, seen.x, seen.y, seen.polarity)] == [np.int64, np.uint16, np.uint16, np.int8]
+    assert events.size == (5, 4)
+
+
+def test_a_sensor_of_the_cropped_size_matches_the_crop_as_it_is():
+    events = RiggedEvents(everywhere(), rig(), (WIDTH, HEIGHT), crop_origin=(3, 2), full_size=(40, 30))
+    assert len(all_of(events)) == WIDTH * HEIGHT
+
+
+def test_events_outside_a_smaller_frame_are_dropped():
+    # a sensor of a third size: neither the crop's nor the whole frame's
+    events = RiggedEvents(everywhere(), rig(), (6, 20))
+    seen = all_of(events)
+    assert len(seen) == 6 * HEIGHT
+    assert seen.x.max() == 5
+
+
+def test_hot_pixels_are_sensor_pixels_and_are_dropped_before_the_crop():
+    hot = [(3, 2), (11, 9), (7, 5)]
+    plain = RiggedEvents(everywhere(), rig(), (5, 4), (3, 2), (WIDTH, HEIGHT))
+    clean = RiggedEvents(everywhere(), rig(hot=hot), (5, 4), (3, 2), (WIDTH, HEIGHT))
+    seen, kept = (set(zip(e.x.tolist(), e.y.tolist(), strict=True)) for e in (all_of(plain), all_of(clean)))
+    assert seen - kept == {(0, 0), (4, 3)}
+    assert kept < seen
+
+
+def test_noise_of_the_frames_is_floor_and_shot_in_quadrature():
+    # variance = floor^2 + shot * light
+    known = Rig(*[Quantity(0)] * 4, frame_noise=Quantity([0.003, 1e-4]))
+    found = known.noise(np.float32([-1.0, 0.0, 0.16]))
+    assert found.dtype == np.float32
+    np.testing.assert_allclose(found, [0.003, 0.003, 0.005], rtol=1e-5)
+
+
+def test_contrast_carries_the_ramp():
+    contrast = Rig(Quantity(0), Quantity(0.0), Quantity(0.2), Quantity(0.3), Quantity(1500)).contrast
+    assert (contrast.positive, contrast.negative, contrast.ramp_us) == (0.2, 0.3, 1500)
