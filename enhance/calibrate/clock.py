@@ -1,4 +1,4 @@
-"""The offset between the event clock and the frame clock, and the events' ramp, from the pictures alone.
+"""The offset between the event clock and the frame clock, from the pictures alone.
 
 The blurred frames themselves say when the events belong to them: for the right offset, the events between and inside
 two exposures predict how the log light of the two *averages* differs,
@@ -13,7 +13,7 @@ itself. The correlation of the two sides does not depend on the thresholds' scal
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
@@ -22,7 +22,6 @@ from enhance.calibrate.evidence import LONGEST_US, Pair
 from enhance.errors import CalibrationError
 from enhance.kernels.double_integral import log_blur_ratio
 from enhance.recording import Contrast, EventSource
-from enhance.rig import Quantity
 
 #: How far the coarse search looks either side, microseconds.
 SEARCH_US = 2_000_000
@@ -34,10 +33,6 @@ COARSE_PAIRS, COARSE_PIXELS = 8, 4_000
 LEAST_CORRELATION = 0.25
 #: A periodic scene fits at several offsets: those within this part of the best one count as equal.
 EQUAL_PEAK = 0.03
-#: Ramps tried, as parts of the exposure, and the shortest that changes anything.
-RAMPS, LEAST_RAMP_US = (32, 16, 8, 4), 200
-#: The shortest ramp within this much of the best correlation is taken, by these pairs: a longer one only adds noise.
-EQUAL_RAMP, RAMP_PAIRS = 1e-4, 6
 METHOD = "correlation of frame change and double integral"
 #: Steps whose events are read at a time in the coarse search: memory follows this, not the search range.
 PIECE_BINS = 50
@@ -176,9 +171,7 @@ def refine_offset(
 ) -> tuple[int, float | None, float]:
     """Maximise the double integral's own correlation around a first offset.
 
-    A staircase is late by part of a threshold, which looks like a clock offset; blur tells the two apart, because the
-    ramp changes what happens *within* the exposure. Sharp frames cannot tell: there the staircase is kept, and the
-    offset holds both.
+    A staircase is late by part of a threshold, which looks like a clock offset: the ramp must be set before.
 
     Parameters
     ----------
@@ -203,45 +196,6 @@ def refine_offset(
         table = np.stack([_moments(pair, events, offsets, contrast) for pair in pairs])
         centre, reach = int(offsets[_correlation(table).argmax()]), 4 * step
     return round(_vertex(offsets, _correlation(table))), _jackknife(offsets, table), float(_correlation(table).max())
-
-
-def estimate_ramp(
-    pairs: Sequence[Pair], events: EventSource, centre: int, contrast: Contrast, *, offset_known: bool
-) -> Quantity:
-    """Find how long before its event a change of light begins, from blurred frames.
-
-    Parameters
-    ----------
-    pairs, events
-        As in `coarse_offset`.
-    centre : int
-        The best offset of a staircase, microseconds.
-    contrast : Contrast
-        The thresholds, as far as they are known.
-    offset_known : bool
-        Keep that offset for every ramp.
-
-    Returns
-    -------
-    Quantity
-        Microseconds; 0, with the reason, where the frames are too sharp to tell.
-    """
-    exposure = int(np.median([pair.first.exposure_us for pair in pairs])) if pairs else 0
-    ramps = [0, *(exposure // part for part in RAMPS if exposure // part >= LEAST_RAMP_US)]
-    if len(ramps) == 1:
-        return Quantity(0, None, "assumed", f"exposures of {exposure} us cannot tell a ramp from a clock offset")
-    strongest = sorted(pairs, key=lambda p: float(np.abs(p.change).sum()), reverse=True)[:RAMP_PAIRS]
-    reached = []
-    for ramp in ramps:
-        # A ramp takes over part of the delay: the best offset moves later, by half of it at the most.
-        reach = [0] if offset_known else range(-500, 501 + ramp // 2, 250)
-        offsets = centre + np.array(reach, dtype=np.int64)
-        with_ramp = replace(contrast, ramp_us=ramp)
-        table = np.stack([_moments(pair, events, offsets, with_ramp) for pair in strongest])
-        reached.append(float(_correlation(table).max()))
-    chosen = next(k for k, value in enumerate(reached) if value >= max(reached) - EQUAL_RAMP)
-    evidence = "correlation " + ", ".join(f"{r} us {c:.4f}" for r, c in zip(ramps, reached, strict=True))
-    return Quantity(ramps[chosen], None, METHOD, evidence)
 
 
 def _moments(pair: Pair, events: EventSource, offsets: NDArray[np.int64], contrast: Contrast) -> NDArray[np.float64]:

@@ -6,16 +6,20 @@ from collections.abc import Sequence
 from dataclasses import replace
 from typing import Any
 
-from enhance.calibrate.clock import METHOD, coarse_offset, estimate_ramp, refine_offset
+from enhance.calibrate.clock import METHOD, coarse_offset, refine_offset
 from enhance.calibrate.contrast import START, estimate_contrast
 from enhance.calibrate.evidence import Pair, gather_pairs
 from enhance.calibrate.frame_noise import estimate_frame_noise
 from enhance.calibrate.hot_pixels import find_hot_pixels
+from enhance.calibrate.ramp import estimate_ramp
 from enhance.calibrate.rig_file import read_rig
 from enhance.errors import CalibrationError
 from enhance.recording import Contrast, Recording
 from enhance.rig import Quantity, Rig, RiggedEvents
 from enhance.settings import RigSettings
+
+#: How far the offset is sought around the one before, each time with better thresholds.
+REACHES_US = (8_000, 2_000, 1_000)
 
 UNKNOWN = Quantity(None, None, "not measured", "")
 
@@ -127,32 +131,26 @@ def _with_clock(rig: Rig, recording: Recording, pairs: list[Pair], settings: Rig
 def _with_ramp(rig: Rig, recording: Recording, pairs: list[Pair]) -> Rig:
     if rig.ramp_us.value is not None:
         return rig
-    contrast = _contrast(rig, recording, pairs, 0)
-    ramp = estimate_ramp(pairs, _events(recording, rig), 0, contrast, offset_known=True)
-    return replace(rig, ramp_us=ramp)
+    return replace(rig, ramp_us=estimate_ramp(pairs, _events(recording, rig)))
 
 
 def _refined(rig: Rig, recording: Recording, pairs: list[Pair], first_us: int, remark: str) -> Rig:
     """Bring clock, thresholds and ramp to agree, each with the best of the others so far."""
-    rig = replace(rig, offset_us=Quantity(first_us))
-    start = Contrast(*START)
-    offset, _, _ = refine_offset(pairs, _events(recording, rig), 0, 8_000, start)
-    rig = replace(rig, offset_us=Quantity(first_us + offset))
-    contrast = _contrast(rig, recording, pairs, 0)
-    offset, _, _ = refine_offset(pairs, _events(recording, rig), 0, 2_000, contrast)
-    rig = replace(rig, offset_us=Quantity(rig.offset_us.value + offset))
-    if rig.ramp_us.value is None:
-        ramp = estimate_ramp(pairs, _events(recording, rig), 0, contrast, offset_known=False)
-        rig = replace(rig, ramp_us=ramp)
-    contrast = _contrast(rig, recording, pairs, int(rig.ramp_us.value))
-    reach = 1_000 + int(rig.ramp_us.value) // 2
-    offset, uncertainty, correlation = refine_offset(pairs, _events(recording, rig), 0, reach, contrast)
+    rig = _with_ramp(replace(rig, offset_us=Quantity(first_us)), recording, pairs)
+    contrast = Contrast(*START, int(rig.ramp_us.value))
+    found: tuple[int, float | None, float] = (0, None, 0.0)
+    for reach in REACHES_US:
+        found = refine_offset(pairs, _events(recording, rig), 0, reach, contrast)
+        rig = replace(rig, offset_us=Quantity(rig.offset_us.value + found[0]))
+        contrast = _contrast(rig, recording, pairs)
+    _, uncertainty, correlation = found
     evidence = f"{remark}correlation {correlation:.3f} over {len(pairs)} pairs of keys"
-    return replace(rig, offset_us=Quantity(rig.offset_us.value + offset, uncertainty, METHOD, evidence))
+    return replace(rig, offset_us=Quantity(rig.offset_us.value, uncertainty, METHOD, evidence))
 
 
-def _contrast(rig: Rig, recording: Recording, pairs: list[Pair], ramp_us: int) -> Contrast:
+def _contrast(rig: Rig, recording: Recording, pairs: list[Pair]) -> Contrast:
     """Thresholds as far as they are known or can be told with this clock, for the search of the clock itself."""
+    ramp_us = int(rig.ramp_us.value)
     found = [rig.contrast_positive.value, rig.contrast_negative.value]
     if None in found:
         told = estimate_contrast(_covered(pairs, recording, rig), _events(recording, rig), ramp_us)

@@ -77,7 +77,7 @@ class Keys:
         -------
         Picture
         """
-        return _kept(self._pictures, key, lambda: self._picture(key), 4)
+        return remember(self._pictures, key, lambda: self._picture(key), 4)
 
     def _picture(self, key: int) -> Picture:
         frame = self.frames.frame(self.indices[key])
@@ -111,9 +111,10 @@ class Keys:
             if not self.covered(key):
                 return _captured(frame, noise)
             events = self._near(*interval)
-            return own_evidence(log_light(light), noise, events, interval, self.times_us[key], self.rig.contrast)
+            log_image = log_light(light).astype(np.float64)
+            return own_evidence(log_image, noise, events, interval, self.times_us[key], self.rig.contrast)
 
-        return _kept(self._kept.own, key, make, _KEPT)
+        return remember(self._kept.own, key, make, _KEPT)
 
     def _change(self, key: int) -> Evidence:
         def make() -> Evidence:
@@ -123,7 +124,7 @@ class Keys:
             interval = (self.times_us[key], self.times_us[key + 1])
             return change_evidence(self.span_events(key), interval, self.rig.contrast, (shape[0], shape[1]))
 
-        return _kept(self._kept.change, key, make, _KEPT)
+        return remember(self._kept.change, key, make, _KEPT)
 
     def _near(self, start_us: int, end_us: int) -> Events:
         if self.events is None:
@@ -142,7 +143,7 @@ def _time(frames: FrameSource, index: int) -> int:
     return (int(frames.start_us[index]) + int(frames.end_us[index])) // 2
 
 
-def _kept(store: OrderedDict[int, T], key: int, make: Callable[[], T], most: int) -> T:
+def remember(store: OrderedDict[int, T], key: int, make: Callable[[], T], most: int) -> T:
     """Look a value up or make it; the oldest go when there are more than `most`."""
     if key not in store:
         store[key] = make()

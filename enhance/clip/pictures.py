@@ -6,13 +6,19 @@ from bisect import bisect_right
 from collections import OrderedDict
 from typing import TYPE_CHECKING
 
-from enhance.clip.keys import Keys, _kept
+import numpy as np
+from numpy.typing import NDArray
+
+from enhance.clip.keys import Keys, remember
 from enhance.interpolate import Span, analytic_blend, with_colour
 from enhance.kernels.optical_flow import flow_between, moved_blend
+from enhance.light import Image
 from enhance.recording import By, Kind, Picture
 
 if TYPE_CHECKING:
     from enhance.interpolate.network import FusionNetwork
+
+Flow = NDArray[np.float32]
 
 
 class Pictures:
@@ -28,7 +34,7 @@ class Pictures:
     def __init__(self, keys: Keys, network: FusionNetwork | None) -> None:
         self.keys, self.network = keys, network
         self._spans: OrderedDict[int, Span] = OrderedDict()
-        self._flows: OrderedDict[int, tuple] = OrderedDict()
+        self._flows: OrderedDict[int, tuple[Flow, Flow]] = OrderedDict()
 
     def at(self, time_us: int) -> Picture:
         """Make the picture of one instant.
@@ -62,16 +68,16 @@ class Pictures:
 
     def span(self, key: int) -> Span:
         """Prepare the span from a key to the next, which the events must cover."""
-        return _kept(self._spans, key, lambda: self._span(key), 2)
+        return remember(self._spans, key, lambda: self._span(key), 2)
 
     def _span(self, key: int) -> Span:
         interval = (self.keys.times_us[key], self.keys.times_us[key + 1])
         left, right = self.keys.picture(key).image, self.keys.picture(key + 1).image
         return Span(left, right, interval, self.keys.span_events(key), self.keys.rig.contrast)
 
-    def _by_frames(self, key: int, time_us: int):  # type: ignore[no-untyped-def]
+    def _by_frames(self, key: int, time_us: int) -> Image:
         """Move the keys by their own flow: no event tells anything here."""
         left, right = self.keys.picture(key).image, self.keys.picture(key + 1).image
-        flows = _kept(self._flows, key, lambda: (flow_between(left, right), flow_between(right, left)), 2)
+        there, back = remember(self._flows, key, lambda: (flow_between(left, right), flow_between(right, left)), 2)
         start, end = self.keys.times_us[key], self.keys.times_us[key + 1]
-        return moved_blend(left, right, *flows, (time_us - start) / (end - start))
+        return moved_blend(left, right, there, back, (time_us - start) / (end - start))

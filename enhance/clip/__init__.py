@@ -1,0 +1,19 @@
+"""ONE recording through the rooms: the only part that knows their order.
+
+::
+
+    source.py    opens a recording
+    keys.py      calibrate, deblur     -> sharp keys
+    plan.py      which instants, when
+    pictures.py  interpolate           -> a picture at any instant
+    held_out.py  measure               -> the second pass
+    outputs.py   write
+    run.py       all of it, in order
+    check.py     what can be known before; preview.py: three pictures to look at first
+"""
+
+from enhance.clip.check import Findings, check
+from enhance.clip.preview import preview
+from enhance.clip.run import ClipResult, calibrate, run
+
+__all__ = ["ClipResult", "Findings", "calibrate", "check", "preview", "run"]

@@ -1,0 +1,147 @@
+"""Everything that can be known of a job before work."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+from dataclasses import dataclass
+
+import numpy as np
+
+from enhance.calibrate import known_rig
+from enhance.clip.plan import make_plan
+from enhance.clip.source import events_on_frames, opened
+from enhance.errors import EnhanceError, JobError
+from enhance.recording import Recording
+from enhance.rig import Rig
+from enhance.settings import ClipSettings
+
+#: Seconds for one pixel of one picture, as measured on two cores of a plain workstation (DEVELOPERS.md says how):
+#: a key, an inserted picture with the network and without it, one of the second pass's exposures; and for one event.
+KEY_S, FUSED_S, BLENDED_S, JUDGED_S, EVENT_S = 5e-7, 1.4e-6, 8e-7, 3e-6, 1e-7
+#: Pictures a held-out frame needs for its exposure, in the mean; and seconds a calibration takes.
+EXPOSED, CALIBRATION_S = 12, 15.0
+#: Bytes a pixel of a 16-bit still and of the clip.
+STILL_BYTES, CLIP_BYTES = 2.0, {"h264": 0.15, "ffv1": 1.5, "none": 0.0}
+
+
+@dataclass(frozen=True)
+class Findings:
+    """What a check found.
+
+    Parameters
+    ----------
+    facts, warnings, mistakes : tuple of str
+        What is there; what the user should know; what would make the job fail.
+    pictures : int
+        Planned.
+    seconds : float
+        Predicted duration.
+    bytes : int
+        Predicted size of the outputs.
+    """
+
+    facts: tuple[str, ...]
+    warnings: tuple[str, ...]
+    mistakes: tuple[str, ...]
+    pictures: int
+    seconds: float
+    bytes: int
+
+
+def check(settings: ClipSettings) -> Findings:
+    """Look a job over without working on it or writing anything.
+
+    Parameters
+    ----------
+    settings : ClipSettings
+
+    Returns
+    -------
+    Findings
+    """
+    try:
+        with opened(settings) as recording:
+            return _look(recording, settings)
+    except JobError as error:
+        return Findings((), (), error.mistakes or (str(error),), 0, 0.0, 0)
+    except EnhanceError as error:
+        return Findings((), (), (str(error),), 0, 0.0, 0)
+
+
+def _look(recording: Recording, settings: ClipSettings) -> Findings:
+    frames = recording.frames
+    rig = known_rig(recording, settings.rig)
+    times = [int(t) for t in (frames.start_us + frames.end_us) // 2]
+    plan = make_plan(settings, times)
+    mistakes, warnings = _overlap(recording, rig)
+    warnings += [*frames.notes, *recording.events.notes, *plan.remarks]
+    if len(frames) == 1:
+        warnings.append("one frame only: stills are made, no clip")
+    if settings.hold_out >= len(frames):
+        warnings.append(f"measure.hold_out = {settings.hold_out} leaves no frame between keys: no figures are made")
+    if settings.network != "off" and not mistakes:
+        from enhance.clip.run import load_fusion
+
+        try:
+            load_fusion(settings)
+        except EnhanceError as error:
+            mistakes.append(str(error))
+    pictures = len(plan.pictures)
+    seconds, size = _cost(recording, settings, pictures)
+    facts = [*_facts(recording), f"{pictures} pictures planned"]
+    return Findings(tuple(facts), tuple(warnings), tuple(mistakes), pictures, seconds, size)
+
+
+def _facts(recording: Recording) -> Iterator[str]:
+    frames, events = recording.frames, recording.events
+    height, width = frames.shape[:2]
+    colour = "colour" if len(frames.shape) == 3 else "grey"
+    exposure = (frames.end_us - frames.start_us) / 1000
+    low, high = float(exposure.min()), float(exposure.max())
+    spread = f"{low:.3f} ms" if low == high else f"{low:.3f} to {high:.3f} ms"
+    length = (int(frames.end_us[-1]) - int(frames.start_us[0])) / 1e6
+    rate = f", {1e6 / float(np.median(np.diff(frames.start_us))):.3f} a second" if len(frames) > 1 else ""
+    yield f"frames: {len(frames)} of {width} x {height}, {colour}{rate}, {length:.3f} s, exposure {spread}"
+    seconds = (events.cover_end_us - events.cover_start_us) / 1e6
+    yield (
+        f"events: {events.count} of {events.size[0]} x {events.size[1]} in {seconds:.3f} s, "
+        f"{events.count / max(seconds, 1e-6) / 1e6:.3f} million a second"
+    )
+
+
+def _overlap(recording: Recording, rig: Rig) -> tuple[list[str], list[str]]:
+    """Say whether frames and events meet, where the clock is known; what will be searched, where it is not."""
+    frames, raw = recording.frames, recording.events
+    first, last = int(frames.start_us[0]), int(frames.end_us[-1])
+    events = events_on_frames(recording, rig)
+    if events is None:
+        if raw.cover_start_us < last and first < raw.cover_end_us:
+            return [], []
+        return [], ["the clocks' epochs do not overlap: the starts will be matched first, then searched around"]
+    if events.cover_end_us <= first or last <= events.cover_start_us:
+        return [
+            f"events and frames do not overlap: events run from {events.cover_start_us} to {events.cover_end_us} us, "
+            f'frames from {first} to {last} us; check events.time_unit and frames.times, or set rig.clock = "estimate"'
+        ], []
+    inside = (frames.start_us >= events.cover_start_us) & (frames.end_us <= events.cover_end_us)
+    left = int((~inside).sum())
+    if left:
+        return [], [f"events do not cover the exposure of {left} of {len(frames)} frames: these stay as captured"]
+    return [], []
+
+
+def _cost(recording: Recording, settings: ClipSettings, pictures: int) -> tuple[float, int]:
+    """Predict seconds and bytes."""
+    frames = recording.frames
+    pixels = frames.shape[0] * frames.shape[1]
+    colours = frames.shape[2] if len(frames.shape) == 3 else 1
+    keys = len(frames)
+    each = BLENDED_S if settings.network == "off" else FUSED_S
+    seconds = pixels * (KEY_S * keys + each * max(pictures - keys, 0)) + CALIBRATION_S
+    seconds += EVENT_S * recording.events.count
+    if settings.hold_out:
+        held = keys - len(range(0, keys, settings.hold_out))
+        seconds += held * pixels * (JUDGED_S + each * EXPOSED) + CALIBRATION_S
+    stills = {"none": 0, "deblurred": min(keys, pictures), "all": pictures}[settings.output.stills]
+    per_pixel = colours * (stills * STILL_BYTES + pictures * CLIP_BYTES[settings.output.video])
+    return seconds, int(pixels * per_pixel) + 1_000_000

@@ -1,0 +1,85 @@
+"""Three pictures to look at before the night: a wrong clock or curve shows at once."""
+
+from __future__ import annotations
+
+from pathlib import Path
+
+import numpy as np
+
+from enhance.clip.keys import Keys
+from enhance.clip.outputs import write_one
+from enhance.clip.pictures import Pictures
+from enhance.clip.run import load_fusion, measured_rig
+from enhance.clip.source import events_on_frames, opened
+from enhance.light import Image, Light, luma
+from enhance.recording import By, Events, Kind, Picture, Recording
+from enhance.settings import ClipSettings
+
+#: Keys the rig of a preview is measured on: enough for a look, few enough for half a minute.
+KEYS = 24
+
+
+def preview(settings: ClipSettings, folder: Path) -> list[Path]:
+    """Make one deblurred key, one inserted picture, and a frame with its events drawn over it.
+
+    Parameters
+    ----------
+    settings : ClipSettings
+    folder : Path
+        Where the three go.
+
+    Returns
+    -------
+    list of Path
+    """
+    with opened(settings) as recording:
+        count = len(recording.frames)
+        first = _busiest(recording) if count > 1 else 0
+        near = range(max(0, first - KEYS // 2), min(count, first + KEYS // 2))
+        rig = measured_rig(recording, near, settings)
+        keys = Keys(recording.frames, near, events_on_frames(recording, rig), rig)
+        pictures = Pictures(keys, load_fusion(settings) if count > 1 else None)
+        light = recording.frames.light
+        start = keys.times_us[0]
+        key = first - near.start
+        made = [
+            write_one(folder / "frame-with-events.png", _drawn(recording, keys, key), light, start),
+            write_one(folder / "deblurred.png", keys.picture(key), light, start),
+        ]
+        if count > 1:
+            middle = (keys.times_us[key] + keys.times_us[key + 1]) // 2
+            made.append(write_one(folder / "inserted.png", pictures.at(middle), light, start))
+        return made
+
+
+def _busiest(recording: Recording) -> int:
+    """Find the frame, among some, whose interval to the next holds most events: there a mistake shows."""
+    frames, events = recording.frames, recording.events
+    starts = np.linspace(0, len(frames) - 2, min(len(frames) - 1, 200)).round().astype(int)
+    shift = 0
+    if events.cover_end_us <= frames.start_us[0] or frames.end_us[-1] <= events.cover_start_us:
+        shift = events.cover_start_us - int(frames.start_us[0])
+    counts = [
+        events.count_between(int(frames.start_us[k]) + shift, int(frames.start_us[k + 1]) + shift) for k in starts
+    ]
+    return int(starts[int(np.argmax(counts))])
+
+
+def _drawn(recording: Recording, keys: Keys, key: int) -> Picture:
+    """Draw the events of a frame's exposure over it: brighter ones white, darker ones black, the frame dimmed grey."""
+    frame = recording.frames.frame(keys.indices[key])
+    events = Events.none()
+    if keys.events is not None:
+        # A sharp frame has hardly any exposure: a short while around it shows where the edges are.
+        half = max(frame.exposure_us, 4_000) // 2
+        events = keys.events.between(frame.time_us - half, frame.time_us + half)
+    image = _overlay(luma(frame.image), events, recording.frames.light)
+    return Picture(image, frame.time_us, Kind.CAPTURED, By.FRAMES)
+
+
+def _overlay(light: Image, events: Events, curve: Light) -> Image:
+    codes = 0.3 * curve.full_scale + 0.4 * np.clip(curve.to_codes(light), 0, curve.full_scale)
+    rising = events.polarity > 0
+    codes[events.y[rising], events.x[rising]] = curve.full_scale
+    codes[events.y[~rising], events.x[~rising]] = curve.black
+    return curve.to_linear(codes)

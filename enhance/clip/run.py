@@ -1,0 +1,271 @@
+"""One recording from files to pictures, clip and figures."""
+
+from __future__ import annotations
+
+import time
+from collections import Counter
+from collections.abc import Callable, Iterator
+from contextlib import ExitStack, contextmanager
+from dataclasses import dataclass, field
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+
+from enhance.calibrate import calibrate as calibrate_recording
+from enhance.calibrate import rig_text
+from enhance.clip.held_out import Judged, judge
+from enhance.clip.keys import Keys
+from enhance.clip.outputs import Outputs
+from enhance.clip.pictures import Pictures
+from enhance.clip.plan import Plan, make_plan
+from enhance.clip.quality import held_out_summary, sharpness_summary
+from enhance.clip.source import events_on_frames, opened
+from enhance.errors import CalibrationError
+from enhance.measure import sharpness
+from enhance.recording import By, Kind, Recording
+from enhance.rig import Rig
+from enhance.settings import ClipSettings
+from enhance.shipped import shipped_folder
+from enhance.write import cautions, write_text
+
+if TYPE_CHECKING:
+    from enhance.interpolate.network import FusionNetwork
+
+#: Done, total, what.
+Progress = Callable[[int, int, str], None]
+WEIGHTS = "fusion.safetensors"
+
+
+@dataclass(frozen=True)
+class ClipResult:
+    """What a run made.
+
+    Parameters
+    ----------
+    files : tuple of str
+        Written, relative to the output folder.
+    counts : dict
+        Pictures by kind, and what else is counted.
+    notes : tuple of str
+        Corrections and cautions the user should read.
+    figures : dict
+        The content of quality.json.
+    timings : dict
+        Seconds of each stage.
+    """
+
+    files: tuple[str, ...]
+    counts: dict[str, int]
+    notes: tuple[str, ...]
+    figures: dict[str, Any]
+    timings: dict[str, float]
+
+
+@dataclass
+class _Progress:
+    """How far a run is: its stages' times, what is to be reported, and what is to be counted."""
+
+    report: Progress
+    total: int = 1
+    done: int = 0
+    timings: dict[str, float] = field(default_factory=dict)
+
+    def step(self, what: str) -> None:
+        self.done += 1
+        self.report(self.done, self.total, what)
+
+    @contextmanager
+    def stage(self, name: str) -> Iterator[None]:
+        started = time.monotonic()
+        try:
+            yield
+        finally:
+            self.timings[name] = round(time.monotonic() - started, 3)
+
+
+def run(settings: ClipSettings, progress: Progress) -> ClipResult:
+    """Run one recording's job.
+
+    Parameters
+    ----------
+    settings : ClipSettings
+    progress : callable
+        Called with done, total and what is being done.
+
+    Returns
+    -------
+    ClipResult
+
+    Raises
+    ------
+    EnhanceError
+        If an input cannot be used, the rig cannot be told, the weights cannot be read or an output not be written.
+    """
+    state = _Progress(progress)
+    with ExitStack() as stack:
+        with state.stage("open"):
+            progress(0, 1, "reading the recording")
+            recording = stack.enter_context(opened(settings))
+        return _run(recording, settings, state)
+
+
+def calibrate(settings: ClipSettings, progress: Progress) -> Rig:
+    """Measure the rig of one recording and write rig.toml into its output folder.
+
+    Parameters
+    ----------
+    settings : ClipSettings
+    progress : callable
+
+    Returns
+    -------
+    Rig
+    """
+    progress(0, 1, "measuring the rig")
+    with opened(settings) as recording:
+        rig = measured_rig(recording, range(len(recording.frames)), settings)
+    write_text(settings.output.folder / "rig.toml", rig_text(rig))
+    progress(1, 1, "measuring the rig")
+    return rig
+
+
+def measured_rig(recording: Recording, keys: range, settings: ClipSettings) -> Rig:
+    """Calibrate on some keys, and see that events and frames meet at all.
+
+    Parameters
+    ----------
+    recording : Recording
+    keys : range
+        Frames that may be looked at.
+    settings : ClipSettings
+
+    Returns
+    -------
+    Rig
+
+    Raises
+    ------
+    CalibrationError
+        If the rig cannot be told, or no event lies near the frames.
+    """
+    rig = calibrate_recording(recording, keys, settings.rig)
+    events = events_on_frames(recording, rig)
+    if events is not None:
+        first, last = int(recording.frames.start_us[0]), int(recording.frames.end_us[-1])
+        if events.cover_end_us <= first or last <= events.cover_start_us:
+            raise CalibrationError(
+                f"{settings.title}: events and frames do not overlap: with an offset of {rig.offset_us.value} us the "
+                f"events run from {events.cover_start_us} to {events.cover_end_us} us, the frames from {first} to "
+                f'{last} us. Check events.time_unit and frames.times, or set rig.clock = "estimate"'
+            )
+    return rig
+
+
+def load_fusion(settings: ClipSettings) -> FusionNetwork | None:
+    """Load the fusion network a job asks for; None where it is off."""
+    if settings.network == "off":
+        return None
+    from enhance.interpolate.network import load_network
+
+    return load_network(shipped_folder("models") / WEIGHTS)
+
+
+def _run(recording: Recording, settings: ClipSettings, state: _Progress) -> ClipResult:
+    count = len(recording.frames)
+    state.report(0, 1, "measuring the rig")
+    with state.stage("calibrate"):
+        rig = measured_rig(recording, range(count), settings)
+    network = load_fusion(settings)
+    keys = Keys(recording.frames, range(count), events_on_frames(recording, rig), rig)
+    plan = make_plan(settings, keys.times_us)
+    every = settings.hold_out if settings.hold_out and count > settings.hold_out else 0
+    held = [i for i in range(count) if every and i % every and i < every * ((count - 1) // every)]
+    state.total = len(plan.pictures) + len(held)
+    with Outputs(settings, recording.frames, plan) as outputs:
+        outputs.text("rig.toml", rig_text(rig))
+        with state.stage("pictures"):
+            counts, sharp = _deliver(Pictures(keys, network), plan, outputs, state)
+    figures: dict[str, Any] = {
+        "title": settings.title,
+        "pictures": dict(counts),
+        "deblurring": sharp,
+        "expected_psnr": "not known: no figure of trust is attached to single pictures yet",
+        "cautions": cautions.LONG,
+    }
+    with state.stage("held_out"):
+        if held:
+            figures["held_out"] = _judge_all(recording, settings, network, every, held, outputs, state)
+        else:
+            figures["held_out"] = None
+    outputs.record("quality.json", figures)
+    notes = _notes(recording, rig, plan, counts)
+    return ClipResult(tuple(outputs.files), dict(counts), notes, figures, state.timings)
+
+
+def _deliver(pictures: Pictures, plan: Plan, outputs: Outputs, state: _Progress) -> tuple[Counter[str], dict[str, Any]]:
+    """Make and write the pictures of the plan."""
+    counts: Counter[str] = Counter()
+    sharp = []
+    frames = pictures.keys.frames
+    index = {t: i for i, t in enumerate(pictures.keys.times_us)}
+    for planned in plan.pictures:
+        picture = pictures.at(planned.time_us)
+        outputs.add(planned, picture)
+        counts[str(picture.kind)] += 1
+        if picture.kind is Kind.INSERTED and picture.by is By.FRAMES:
+            counts["inserted from frames alone"] += 1
+        if picture.kind is Kind.DEBLURRED:
+            captured = frames.frame(index[planned.time_us]).image
+            sharp.append((_sharpness(captured, frames.light), _sharpness(picture.image, frames.light)))
+        state.step(f"{picture.kind} picture")
+    return counts, sharpness_summary(sharp)
+
+
+def _sharpness(image: np.ndarray, light: Any) -> float | None:
+    return sharpness(np.clip(light.to_codes(image), 0, light.full_scale), light.full_scale)
+
+
+def _judge_all(
+    recording: Recording,
+    settings: ClipSettings,
+    network: FusionNetwork | None,
+    every: int,
+    held: list[int],
+    outputs: Outputs,
+    state: _Progress,
+) -> dict[str, Any]:
+    """Run the second pass; nothing in it has seen a held-out frame."""
+    count = len(recording.frames)
+    keys = range(0, count, every)
+    try:
+        rig = measured_rig(recording, keys, settings)
+    except CalibrationError as error:
+        return {"keys": f"every {every}. frame", "pictures": 0, "reason": f"the second pass cannot be made: {error}"}
+    pictures = Pictures(Keys(recording.frames, keys, events_on_frames(recording, rig), rig), network)
+    judged: list[Judged] = []
+    for index in held:
+        one = judge(pictures, index)
+        outputs.held_out_picture(one)
+        judged.append(Judged(one.picture, one.figures))
+        state.step("held-out frame")
+    outputs.held_out(judged)
+    return held_out_summary(judged, every)
+
+
+def _notes(recording: Recording, rig: Rig, plan: Plan, counts: Counter[str]) -> tuple[str, ...]:
+    notes = [*recording.frames.notes, *recording.events.notes, *plan.remarks]
+    if rig.offset_us.value is None:
+        notes.append(f"the clock of the events cannot be told ({rig.offset_us.evidence}): every picture is from frames")
+    elif counts[Kind.CAPTURED]:
+        notes.append(
+            f"{counts[Kind.CAPTURED]} keys stay as captured: sharp already, or events do not cover their exposure"
+        )
+    if counts["inserted from frames alone"]:
+        notes.append(f"{counts['inserted from frames alone']} pictures are inserted from frames alone, without events")
+    for name in ("contrast_positive", "contrast_negative"):
+        quantity = getattr(rig, name)
+        if quantity.method == "assumed":
+            notes.append(f"{name.replace('_', ' threshold, ')}: {quantity.evidence}")
+    if len(recording.frames) == 1:
+        notes.append("one frame only: no clip is made")
+    return tuple(notes)
