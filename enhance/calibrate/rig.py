@@ -12,7 +12,7 @@ from enhance.calibrate.evidence import Pair, gather_pairs
 from enhance.calibrate.frame_noise import estimate_frame_noise
 from enhance.calibrate.hot_pixels import find_hot_pixels
 from enhance.calibrate.ramp import estimate_ramp
-from enhance.calibrate.rig_file import read_rig
+from enhance.calibrate.rig_file import as_written, read_rig
 from enhance.errors import CalibrationError
 from enhance.recording import Contrast, Recording
 from enhance.rig import Quantity, Rig, RiggedEvents
@@ -58,7 +58,7 @@ def calibrate(recording: Recording, keys: Sequence[int], settings: RigSettings) 
         # Where the sensor did not record, a pixel without events need not be quiet.
         told = estimate_frame_noise(_covered(pairs, recording, rig), _events(recording, rig))
         rig = replace(rig, frame_noise=told)
-    return rig
+    return as_written(rig)
 
 
 def known_rig(recording: Recording, settings: RigSettings) -> Rig:

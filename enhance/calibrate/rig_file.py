@@ -4,12 +4,15 @@ from __future__ import annotations
 
 import json
 import tomllib
+from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
 from enhance.errors import CalibrationError
 from enhance.rig import Quantity, Rig
 
+#: Decimals of a value in the file: far finer than anything is measured.
+DIGITS = 9
 #: Section of the file for each quantity of a rig.
 SECTIONS = {
     "offset_us": "clock.offset_us",
@@ -51,6 +54,18 @@ def rig_text(rig: Rig) -> str:
             lines.append(f"uncertainty = {_number(quantity.uncertainty)}")
         lines += [f"method = {_text(quantity.method)}", f"evidence = {_text(quantity.evidence)}"]
     return "\n".join(lines) + "\n"
+
+
+def as_written(rig: Rig) -> Rig:
+    """Round a rig as its file does, so that one that is fed back in gives the same pictures to the byte."""
+    changes: dict[str, Any] = {}
+    for name in SECTIONS:
+        quantity: Quantity = getattr(rig, name)
+        if isinstance(quantity.value, float):
+            changes[name] = replace(quantity, value=round(quantity.value, DIGITS))
+        elif name == "frame_noise" and quantity.value is not None:
+            changes[name] = replace(quantity, value=[round(float(v), DIGITS) for v in quantity.value])
+    return replace(rig, **changes)
 
 
 def read_rig(path: Path, sensor_size: tuple[int, int]) -> Rig:
@@ -100,7 +115,7 @@ def _text(text: str) -> str:
 def _number(value: Any) -> str:
     if isinstance(value, (list, tuple)):
         return "[" + ", ".join(_number(v) for v in value) + "]"
-    return repr(round(float(value), 9)) if isinstance(value, float) else str(int(value))
+    return repr(round(float(value), DIGITS)) if isinstance(value, float) else str(int(value))
 
 
 def _quantity(document: dict[str, Any], name: str, section: str, path: Path) -> Quantity:

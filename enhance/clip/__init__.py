@@ -8,12 +8,12 @@
     pictures.py  interpolate           -> a picture at any instant
     held_out.py  measure               -> the second pass
     outputs.py   write
-    run.py       all of it, in order
+    passes.py    all of it, in order: the pass that is delivered, and the second one
     check.py     what can be known before; preview.py: three pictures to look at first
 """
 
 from enhance.clip.check import Findings, check
 from enhance.clip.preview import preview
-from enhance.clip.run import ClipResult, calibrate, run
+from enhance.clip.passes import ClipResult, calibrate, run
 
 __all__ = ["ClipResult", "Findings", "calibrate", "check", "preview", "run"]

@@ -80,7 +80,7 @@ def _look(recording: Recording, settings: ClipSettings) -> Findings:
     if settings.hold_out >= len(frames):
         warnings.append(f"measure.hold_out = {settings.hold_out} leaves no frame between keys: no figures are made")
     if settings.network != "off" and not mistakes:
-        from enhance.clip.run import load_fusion
+        from enhance.clip.passes import load_fusion
 
         try:
             load_fusion(settings)
