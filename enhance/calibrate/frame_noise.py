@@ -49,7 +49,9 @@ def estimate_frame_noise(pairs: Sequence[Pair], events: EventSource) -> Quantity
         # An edge that fires here creeps by less than a threshold next door.
         quiet = pair.usable & (cv2.dilate(fired.astype(np.uint8), np.ones((3, 3), np.uint8)) == 0)
         light.append(0.5 * (one.image + two.image)[quiet])
-        difference.append((two.image - one.image)[quiet])
+        # A change of lamp or gain is no noise.
+        gain = np.float32(np.median(two.image[quiet] / one.image[quiet])) if quiet.any() else np.float32(1)
+        difference.append(two.image[quiet] - gain * one.image[quiet])
     level = np.concatenate([*light, np.empty(0, np.float32)])
     change = np.concatenate([*difference, np.empty(0, np.float32)])
     edges = np.linspace(0, 1, CLASSES + 1)

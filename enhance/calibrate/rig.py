@@ -136,7 +136,10 @@ def _with_ramp(rig: Rig, recording: Recording, pairs: list[Pair]) -> Rig:
 
 def _refined(rig: Rig, recording: Recording, pairs: list[Pair], first_us: int, remark: str) -> Rig:
     """Bring clock, thresholds and ramp to agree, each with the best of the others so far."""
-    rig = _with_ramp(replace(rig, offset_us=Quantity(first_us)), recording, pairs)
+    rig = replace(rig, offset_us=Quantity(first_us))
+    # A pair that the sensor did not see all of would pull the offset towards where it did.
+    pairs = _covered(pairs, recording, rig) or pairs
+    rig = _with_ramp(rig, recording, pairs)
     contrast = Contrast(*START, int(rig.ramp_us.value))
     found: tuple[int, float | None, float] = (0, None, 0.0)
     for reach in REACHES_US:

@@ -5,6 +5,7 @@ from __future__ import annotations
 import json
 import tomllib
 from dataclasses import replace
+from numbers import Integral
 from pathlib import Path
 from typing import Any
 
@@ -115,7 +116,7 @@ def _text(text: str) -> str:
 def _number(value: Any) -> str:
     if isinstance(value, (list, tuple)):
         return "[" + ", ".join(_number(v) for v in value) + "]"
-    return repr(round(float(value), DIGITS)) if isinstance(value, float) else str(int(value))
+    return str(int(value)) if isinstance(value, Integral) else repr(round(float(value), DIGITS))
 
 
 def _quantity(document: dict[str, Any], name: str, section: str, path: Path) -> Quantity:
