@@ -14,6 +14,9 @@ from numpy.typing import NDArray
 from enhance.kernels.event_integral import event_counts, exponential_mean, part_filled
 from enhance.recording import Contrast, Events
 
+#: No change of light is larger in log: 100 dB. A pixel that fires on and on (hot for a while) stays finite by it.
+LARGEST_CHANGE = 12.0
+
 
 def log_sum(
     events: Events, start_us: int, end_us: int, contrast: Contrast, shape: tuple[int, int]
@@ -33,7 +36,7 @@ def log_sum(
     Returns
     -------
     ndarray of float64, shape (H, W)
-        ``c+ N+ - c- N-``, and with a ramp the part-filled thresholds at both ends.
+        ``c+ N+ - c- N-``, and with a ramp the part-filled thresholds at both ends; within `LARGEST_CHANGE`.
     """
     if end_us < start_us:
         return -log_sum(events, end_us, start_us, contrast, shape)
@@ -42,7 +45,7 @@ def log_sum(
     change: NDArray[np.float64] = contrast.positive * positive - contrast.negative * negative
     if contrast.ramp_us:
         change += _filled(events, end_us, contrast, shape) - _filled(events, start_us, contrast, shape)
-    return change
+    return np.clip(change, -LARGEST_CHANGE, LARGEST_CHANGE)
 
 
 def log_blur_ratio(
@@ -65,7 +68,7 @@ def log_blur_ratio(
     Returns
     -------
     ndarray of float64, shape (H, W)
-        ``ln B - ln L(f) = ln( (1/T) * integral of exp(S(t) - S(f)) dt )``.
+        ``ln B - ln L(f) = ln( (1/T) * integral of exp(S(t) - S(f)) dt )``; within `LARGEST_CHANGE`.
     """
     if end_us <= start_us:
         return -log_sum(events, start_us, time_us, contrast, shape)
@@ -75,7 +78,9 @@ def log_blur_ratio(
     mean = exponential_mean(seen.t_us, seen.x, seen.y, seen.polarity, interval, contrast.thresholds, shape, ramp)
     # The mean counts from the last event before the exposure: what was part-filled at its start is in it already.
     ratio = np.log(mean) - log_sum(events, start_us, time_us, contrast, shape)
-    return ratio - _filled(events, start_us, contrast, shape) if ramp else ratio
+    if ramp:
+        ratio -= _filled(events, start_us, contrast, shape)
+    return np.clip(ratio, -LARGEST_CHANGE, LARGEST_CHANGE)
 
 
 def _filled(events: Events, time_us: int, contrast: Contrast, shape: tuple[int, int]) -> NDArray[np.float64]:

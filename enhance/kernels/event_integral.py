@@ -24,6 +24,8 @@ from numpy.typing import NDArray
 
 #: Before any event: far enough in the past for every ramp, near enough not to overflow.
 _LONG_AGO = -(2**62)
+#: exp(S) stays within these: only a pixel that fires for no reason leaves them, and its numbers must stay finite.
+_LEAST_GAIN, _MOST_GAIN = 1e-12, 1e12
 
 
 @njit(cache=True, nogil=True)
@@ -56,7 +58,7 @@ def _exponential_mean(t_us, x, y, polarity, start_us, end_us, ramp_us, up, down,
                 area[row, column] += _ramp_excess(gain[row, column], step, ramp, begin - origin, end - origin) / length
         if start_us <= t < end_us:
             before = gain[row, column]
-            after = before * math.exp(step)
+            after = min(max(before * math.exp(step), _LEAST_GAIN), _MOST_GAIN)
             gain[row, column] = after
             area[row, column] += (after - before) * (end_us - t) / length
 

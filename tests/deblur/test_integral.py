@@ -1,7 +1,8 @@
 import numpy as np
+import pytest
 
 from enhance.deblur.integral import deblur
-from enhance.kernels.double_integral import log_blur_ratio, log_sum
+from enhance.kernels.double_integral import LARGEST_CHANGE, log_blur_ratio, log_sum
 from enhance.recording import Contrast, Events
 
 
@@ -53,3 +54,14 @@ def test_colour_keeps_its_ratios():
 
 def test_sum_weighs_each_polarity_by_its_own_threshold():
     assert np.isclose(log_sum(one_pixel([1, 2, 3], [1, 1, -1]), 0, 4, Contrast(0.2, 0.3), (1, 1))[0, 0], 0.1)
+
+
+@pytest.mark.parametrize("ramp_us", [0, 900])
+@pytest.mark.parametrize("polarity", [1, -1])
+def test_a_pixel_that_fires_on_and_on_stays_finite(polarity, ramp_us):
+    # 6000 events of one sign would be a change of light by e^1200: hot for a while, and not told by the calibration
+    events = one_pixel(np.arange(6_000) * 5, [polarity] * 6_000)
+    contrast = Contrast(0.2, 0.2, ramp_us)
+    for time in (0, 15_000, 30_000, 60_000):
+        assert np.isfinite(deblur(np.full((1, 1), 0.3, np.float32), events, 0, 30_000, time, contrast)).all()
+    assert abs(log_sum(events, 0, 30_000, contrast, (1, 1))[0, 0]) == LARGEST_CHANGE

@@ -167,3 +167,16 @@ def test_tiny_pictures_are_no_trouble(shape):
     rng = np.random.default_rng(6)
     left, right = rng.uniform(0.1, 0.9, (2, *shape)).astype(np.float32)
     assert np.isfinite(Span(left, right, (0, 100), Events.none(), C).at(50).stack).all()
+
+
+@pytest.mark.parametrize("polarity", [1, -1])
+def test_a_pixel_that_fires_on_and_on_spoils_no_other(polarity):
+    key = np.full((40, 50), 0.3, np.float32)
+    n = 6_000
+    at = np.full(n, 20, np.uint16)
+    events = Events(np.arange(n) * 5, at, at, np.full(n, polarity, np.int8))
+    stack = Span(key, key, (0, SPAN_US), events, Contrast(0.2, 0.2)).at(MIDDLE_US).stack
+    assert np.isfinite(stack).all()
+    away = np.ones((40, 50), bool)
+    away[12:29, 12:29] = False
+    np.testing.assert_allclose(stack[:, away], 0.3, atol=1e-3)
