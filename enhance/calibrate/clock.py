@@ -13,12 +13,12 @@ itself. The correlation of the two sides does not depend on the thresholds' scal
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
 
-from enhance.calibrate.evidence import LONGEST_US, Pair
+from enhance.calibrate.evidence import LONGEST_US, Pair, thinned
 from enhance.errors import CalibrationError
 from enhance.kernels.double_integral import log_blur_ratio
 from enhance.recording import Contrast, EventSource
@@ -31,6 +31,8 @@ COARSE_STEP_US = 2_000
 COARSE_PAIRS, COARSE_PIXELS = 8, 4_000
 #: A correlation below this is no evidence.
 LEAST_CORRELATION = 0.25
+#: Where the opposite of the frames' change fits this many times better, brighter and darker are exchanged.
+OPPOSITE = 1.5
 #: A periodic scene fits at several offsets: those within this part of the best one count as equal.
 EQUAL_PEAK = 0.03
 METHOD = "correlation of frame change and double integral"
@@ -40,11 +42,12 @@ PIECE_BINS = 50
 
 @dataclass(frozen=True)
 class Peak:
-    """A maximum of the coarse search: offset, correlation, and rivals that fit as well."""
+    """A maximum of the coarse search: offset, correlation, rivals that fit as well, and how well the opposite fits."""
 
     offset_us: int
     correlation: float
     rivals_us: tuple[int, ...]
+    opposite: float = 0.0
 
     @property
     def remark(self) -> str:
@@ -78,6 +81,11 @@ def coarse_offset(pairs: Sequence[Pair], events: EventSource, *, search_us: int 
     if not pairs:
         raise CalibrationError(f"no two successive keys within {LONGEST_US / 1e6:g} s of each other")
     peak = coarse_peak(pairs, events, search_us)
+    if peak is not None and peak.opposite > max(LEAST_CORRELATION, OPPOSITE * peak.correlation):
+        raise CalibrationError(
+            f"events say brighter where frames grow darker (correlation {-peak.opposite:.2f}, against "
+            f"{peak.correlation:.2f} at best); the signs in the events' polarity column look exchanged, mend them"
+        )
     if peak is None or peak.correlation < LEAST_CORRELATION:
         still = not any(pair.change.any() for pair in pairs)
         nothing = "no usable pixel of the frames changes" if still else "no events near the keys"
@@ -115,7 +123,7 @@ def coarse_peak(pairs: Sequence[Pair], events: EventSource, search_us: int) -> P
     # Little activity at the far ends of the range must not look like a good fit by its small energy.
     floor = 0.05 * energy.max()
     correlation = cross / np.sqrt(np.maximum(energy, floor) * observed)
-    return _choose_peak(steps * COARSE_STEP_US, correlation)
+    return replace(_choose_peak(steps * COARSE_STEP_US, correlation), opposite=-float(correlation.min()))
 
 
 def _choose_peak(offsets_us: NDArray[np.int64], correlation: NDArray[np.float64]) -> Peak:
@@ -194,7 +202,7 @@ def refine_offset(
             continue
         offsets = centre + np.arange(-reach // step, reach // step + 1) * step
         table = np.stack([_moments(pair, events, offsets, contrast) for pair in pairs])
-        centre, reach = int(offsets[_correlation(table).argmax()]), 4 * step
+        centre, reach = int(offsets[_correlation(table).argmax()]), step
     return round(_vertex(offsets, _correlation(table))), _jackknife(offsets, table), float(_correlation(table).max())
 
 
@@ -202,7 +210,7 @@ def _moments(pair: Pair, events: EventSource, offsets: NDArray[np.int64], contra
     """(cross, energy of the prediction, energy of the change) for each offset, shape (offsets, 3)."""
     one, two = pair.first, pair.second
     low, high, ramp_us = int(offsets[0]), int(offsets[-1]), contrast.ramp_us
-    seen = events.between(one.start_us - high - ramp_us, two.end_us - low + ramp_us)
+    pair, seen = thinned(pair, events.between(one.start_us - high - ramp_us, two.end_us - low + ramp_us))
     shape = pair.change.shape
     result = np.zeros((len(offsets), 3))
     for row, offset in enumerate(int(o) for o in offsets):

@@ -114,6 +114,16 @@ def test_events_of_another_scene_tell_no_clock(simulated, other):
         coarse_offset(pairs_of(recording), events)
 
 
+def test_exchanged_polarities_are_told(simulated):
+    recording = simulated("plain").recording
+    seen = recording.events.events
+    swapped = EventArray(Events(seen.t_us, seen.x, seen.y, -seen.polarity), recording.events.size)
+    with pytest.raises(
+        CalibrationError, match=r"brighter where frames grow darker \(correlation -0.9\d, against 0.\d\d "
+    ):
+        coarse_offset(pairs_of(recording), swapped)
+
+
 def test_no_events_in_reach_tell_no_clock(simulated, shifted):
     recording = simulated("plain").recording
     with pytest.raises(CalibrationError, match="no events near the keys"):
