@@ -80,15 +80,15 @@ def coarse_offset(pairs: Sequence[Pair], events: EventSource, *, search_us: int 
     """
     if not pairs:
         raise CalibrationError(f"no two successive keys within {LONGEST_US / 1e6:g} s of each other")
-    peak = coarse_peak(pairs, events, search_us)
+    moving = [pair for pair in pairs if pair.change.any()]
+    peak = coarse_peak(moving, events, search_us) if moving else None
     if peak is not None and peak.opposite > max(LEAST_CORRELATION, OPPOSITE * peak.correlation):
         raise CalibrationError(
             f"events say brighter where frames grow darker (correlation {-peak.opposite:.2f}, against "
             f"{peak.correlation:.2f} at best); the signs in the events' polarity column look exchanged, mend them"
         )
     if peak is None or peak.correlation < LEAST_CORRELATION:
-        still = not any(pair.change.any() for pair in pairs)
-        nothing = "no usable pixel of the frames changes" if still else "no events near the keys"
+        nothing = "no events near the keys" if moving else "no usable pixel of the frames changes"
         found = nothing if peak is None else f"best correlation only {peak.correlation:.2f}"
         raise CalibrationError(
             f"frames and events do not move together ({found}); too little motion, or two different scenes"
@@ -102,12 +102,12 @@ def coarse_peak(pairs: Sequence[Pair], events: EventSource, search_us: int) -> P
     Parameters
     ----------
     pairs, events, search_us
-        As in `coarse_offset`.
+        As in `coarse_offset`; in each pair some usable pixel changes.
 
     Returns
     -------
     Peak or None
-        None where no event lies in reach, or no usable pixel changes.
+        None where no event lies in reach.
     """
     strongest = sorted(pairs, key=lambda p: float(np.abs(p.change).sum()), reverse=True)[:COARSE_PAIRS]
     steps = np.arange(-(search_us // COARSE_STEP_US), search_us // COARSE_STEP_US + 1)
@@ -118,7 +118,7 @@ def coarse_peak(pairs: Sequence[Pair], events: EventSource, search_us: int) -> P
         cross += predicted @ signal
         energy += (predicted.astype(np.float64) ** 2).sum(axis=1)
         observed += float(signal @ signal)
-    if not energy.any() or not observed:
+    if not energy.any():
         return None
     # Little activity at the far ends of the range must not look like a good fit by its small energy.
     floor = 0.05 * energy.max()

@@ -15,7 +15,7 @@ from collections.abc import Sequence
 import numpy as np
 from numpy.typing import NDArray
 
-from enhance.calibrate.evidence import USABLE_LIGHT, Pair
+from enhance.calibrate.evidence import USABLE_LIGHT, Pair, thinned
 from enhance.kernels.double_integral import log_blur_ratio
 from enhance.kernels.event_integral import event_counts
 from enhance.recording import Contrast, EventSource
@@ -29,8 +29,6 @@ ENOUGH, ROUNDS = 0.002, 12
 LEAST_PIXELS = 400
 #: A pixel with a single event is as likely one of noise, which says nothing of a threshold.
 LEAST_EVENTS = 2
-#: Pixels of one pair at the most, evenly spread: more only cost time.
-MOST_PIXELS = 20_000
 #: Huber's k: residuals beyond k robust deviations pull no harder than those at k (Huber 1964, 95 % efficiency).
 HUBER = 1.345
 
@@ -93,9 +91,9 @@ def _quantity(value: float, left_out: NDArray[np.float64], name: str, evidence: 
 def _equations(pair: Pair, events: EventSource, contrast: Contrast) -> Rows:
     """Rows of the regression of one pair: (N+, -N-, [N+ > 0], -[N- > 0]) and the latents' log change."""
     one, two = pair.first, pair.second
-    shape = pair.change.shape
     ramp = contrast.ramp_us
-    seen = events.between(one.start_us - ramp, max(two.end_us, two.time_us) + ramp)
+    pair, seen = thinned(pair, events.between(one.start_us - ramp, max(two.end_us, two.time_us) + ramp))
+    shape = pair.change.shape
     first = log_blur_ratio(seen, one.start_us, one.end_us, one.time_us, contrast, shape)
     second = log_blur_ratio(seen, two.start_us, two.end_us, two.time_us, contrast, shape)
     # ln L = ln B - (ln B - ln L)
@@ -103,11 +101,9 @@ def _equations(pair: Pair, events: EventSource, contrast: Contrast) -> Rows:
     between = seen.between(one.time_us, two.time_us)
     positive, negative = event_counts(between.x, between.y, between.polarity, shape)
     usable = pair.usable & (positive + negative >= LEAST_EVENTS) & _stays_in_range(pair, first, second)
-    chosen = np.flatnonzero(usable)
-    chosen = chosen[:: 1 + len(chosen) // MOST_PIXELS]
-    n = positive.ravel()[chosen].astype(np.float64)
-    m = negative.ravel()[chosen].astype(np.float64)
-    return np.stack([n, -m, n > 0, -(m > 0).astype(np.float64)], axis=1), change.ravel()[chosen]
+    n = positive[usable].astype(np.float64)
+    m = negative[usable].astype(np.float64)
+    return np.stack([n, -m, n > 0, -(m > 0).astype(np.float64)], axis=1), change[usable]
 
 
 def _stays_in_range(pair: Pair, first: NDArray[np.float64], second: NDArray[np.float64]) -> NDArray[np.bool_]:

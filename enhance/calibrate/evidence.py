@@ -3,13 +3,13 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
 
 from enhance.light import luma
-from enhance.recording import Frame, FrameSource
+from enhance.recording import Events, Frame, FrameSource
 
 #: Keys looked at when the pairs with most change are chosen: decoding all of an hour would cost more than it tells.
 LOOKED_AT = 48
@@ -17,6 +17,8 @@ LOOKED_AT = 48
 KEPT = 12
 #: Keys further apart (over dropped frames) are no pair: events and search would take memory as the gap grows.
 LONGEST_US = 2_000_000
+#: Events of one pair at the most. Every pixel is evidence on its own, so some rows tell as much as all, sooner.
+MOST_EVENTS = 60_000
 #: Light (1 = full scale) below which the frame's noise and level, above which its ceiling, spoil a logarithm.
 USABLE_LIGHT = (0.02, 0.97)
 
@@ -39,6 +41,29 @@ class Pair:
     second: Frame
     usable: NDArray[np.bool_]
     change: NDArray[np.float64]
+
+
+def thinned(pair: Pair, events: Events) -> tuple[Pair, Events]:
+    """Keep every n-th row of a pair and its events, so that at most about `MOST_EVENTS` are left.
+
+    Parameters
+    ----------
+    pair : Pair
+    events : Events
+
+    Returns
+    -------
+    pair : Pair
+        Of shape (ceil(H / n), W).
+    events : Events
+        Their rows counted anew.
+    """
+    step = 1 + len(events) // MOST_EVENTS
+    if step == 1:
+        return pair, events
+    kept = events.keep(events.y % step == 0)
+    first, second = (replace(frame, image=frame.image[::step]) for frame in (pair.first, pair.second))
+    return Pair(first, second, pair.usable[::step], pair.change[::step]), replace(kept, y=kept.y // np.uint16(step))
 
 
 def gather_pairs(frames: FrameSource, keys: Sequence[int]) -> list[Pair]:

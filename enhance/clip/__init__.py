@@ -13,7 +13,7 @@
 """
 
 from enhance.clip.check import Findings, check
-from enhance.clip.preview import preview
 from enhance.clip.passes import ClipResult, calibrate, run
+from enhance.clip.preview import preview
 
 __all__ = ["ClipResult", "Findings", "calibrate", "check", "preview", "run"]

@@ -8,8 +8,8 @@ import numpy as np
 
 from enhance.clip.keys import Keys
 from enhance.clip.outputs import write_one
-from enhance.clip.pictures import Pictures
 from enhance.clip.passes import load_fusion, measured_rig
+from enhance.clip.pictures import Pictures
 from enhance.clip.source import events_on_frames, opened
 from enhance.light import Image, Light, luma
 from enhance.recording import By, Events, Kind, Picture, Recording
