@@ -114,7 +114,7 @@ class ShelfReport:
             told.append(f"{cautions} caution{'' if cautions == 1 else 's'} above, kept in each record.json")
         folders = [str(job.folder) for job in self.jobs if job.outcome is Outcome.DONE and job.folder]
         if folders:
-            told.append(f"look in {', '.join(folders)}: pictures.csv says how far each picture can be trusted")
+            told.append(f"look in {', '.join(folders)}: quality.json says how far the pictures can be trusted")
         elif self.exit_code == NONE_STARTED:
             told.append("nothing was started; mend what is named above")
         return "; ".join(told) + "."

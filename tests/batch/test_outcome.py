@@ -41,7 +41,7 @@ def test_the_exit_code_follows_from_how_the_jobs_ended(outcomes: list[Outcome], 
 def test_the_last_line_counts_outcomes_and_says_where_to_look() -> None:
     line = shelf(DONE, FAILED, REFUSED, DONE, cautions=("a", "b")).closing_line
     assert line.startswith("4 jobs: 2 done, 1 refused, 1 failed; 8 cautions above, kept in each record.json; ")
-    assert "look in out/0, out/3: pictures.csv" in line
+    assert "look in out/0, out/3: quality.json" in line
 
 
 def test_the_last_line_of_a_command_that_started_nothing_says_so() -> None:
