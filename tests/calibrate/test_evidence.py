@@ -3,9 +3,9 @@
 import numpy as np
 import pytest
 
-from enhance.calibrate.evidence import KEPT, LOOKED_AT, gather_pairs
+from enhance.calibrate.evidence import KEPT, LOOKED_AT, MOST_EVENTS, gather_pairs, thinned
 from enhance.light import Light
-from enhance.recording import FrameArray
+from enhance.recording import Events, FrameArray
 
 
 def frames_of(codes, times=None):
@@ -89,3 +89,24 @@ def test_a_single_row_of_clipped_pixels_makes_a_pair_without_evidence():
     (pair,) = gather_pairs(frames_of(np.full((2, 1, 9), 255)), [0, 1])
     assert not pair.usable.any()
     assert not pair.change.any()
+
+
+def test_a_pair_of_many_events_is_thinned_to_whole_rows():
+    rng = np.random.default_rng(5)
+    (pair,) = gather_pairs(frames_of(rng.integers(60, 180, (2, 10, 8))), [0, 1])
+    n = 3 * MOST_EVENTS
+    x, y = rng.integers(0, 8, n).astype(np.uint16), rng.integers(0, 10, n).astype(np.uint16)
+    events = Events(np.arange(n), x, y, rng.choice(np.array([-1, 1], np.int8), n))
+    few, kept = thinned(pair, events)
+    # n / most + 1 = 4: rows 0, 4 and 8
+    for whole, part in ((pair.change, few.change), (pair.usable, few.usable), (pair.second.image, few.second.image)):
+        np.testing.assert_array_equal(part, whole[[0, 4, 8]])
+    assert len(kept) <= MOST_EVENTS
+    for row, old in enumerate((0, 4, 8)):
+        np.testing.assert_array_equal(kept.t_us[kept.y == row], events.t_us[y == old])
+    assert kept.y.dtype == np.uint16
+
+
+def test_a_pair_of_few_events_is_left_whole():
+    (pair,) = gather_pairs(frames_of(np.random.default_rng(6).integers(60, 180, (2, 10, 8))), [0, 1])
+    assert thinned(pair, Events.none())[0] is pair
