@@ -10,7 +10,7 @@ import torch
 from numpy.typing import NDArray
 
 from enhance.interpolate.candidates import NAMES
-from enhance.interpolate.network import CANDIDATES, FusionNetwork
+from enhance.interpolate.network import CANDIDATES, FusionNetwork, carried_by_events
 from enhance.light import decode, encode
 from enhance.train.data import Shard
 
@@ -38,14 +38,16 @@ def pictures_of(network: FusionNetwork, inputs: Signal) -> tuple[dict[str, Signa
     -------
     pictures : dict of ndarray, shape (H, W)
         Signal; candidates under their names.
-    weights : ndarray, shape (CANDIDATES + 1, H, W)
+    weights : ndarray, shape (MEMBERS, H, W)
     """
-    fused, weighed = network(torch.from_numpy(inputs)[None])
+    known = torch.from_numpy(inputs)[None]
+    fused, weighed = network(known)
     weights = weighed[0].numpy()
+    members = np.concatenate([inputs[: CANDIDATES + 1], carried_by_events(known)[0].numpy()])
     time = inputs[-1]
     made = {
         "network": fused[0, 0].numpy(),
-        "without_residual": (weights * inputs[: CANDIDATES + 1]).sum(axis=0),
+        "without_residual": (weights * members).sum(axis=0),
         "blend": inputs[CANDIDATES],
         "carried": (1 - time) * inputs[0] + time * inputs[1],
     }
@@ -114,13 +116,13 @@ def mean_over_groups(table: Mapping[str, Mapping[str, float]]) -> dict[str, floa
 
 
 def weigh(network: FusionNetwork, shards: Sequence[Shard]) -> dict[str, float]:
-    """Average the weight that each candidate gets, over all pixels of all pictures; the blend's comes last."""
+    """Average the weight that each member of the mixture gets, over all pixels of all pictures."""
     means = [
         pictures_of(network, inputs.astype(np.float32))[1].mean(axis=(1, 2))
         for shard in shards
         for inputs in shard.inputs
     ]
-    names = [*NAMES, "analytic blend"]
+    names = [*NAMES, "analytic blend", "carried pair weighed by events"]
     return {name: float(weight) for name, weight in zip(names, np.mean(means, axis=0), strict=True)}
 
 

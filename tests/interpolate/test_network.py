@@ -16,6 +16,7 @@ from enhance.interpolate.network import (
     INPUTS,
     RESIDUAL,
     FusionNetwork,
+    carried_by_events,
     fuse,
     load_network,
     macs_per_pixel,
@@ -98,6 +99,20 @@ def test_steady_motion_fits_itself_and_hidden_motion_does_not() -> None:
     np.testing.assert_allclose(cues[1], np.log1p(4 * np.sqrt(2)) / 2, rtol=1e-5)
     lost = Candidates(known.stack, 0.25, known.counts, known.change, known.mismatch, (steady, steady))
     assert network_inputs(lost)[-3].min() > 1
+
+
+def test_the_carried_pair_is_weighed_by_events_and_without_them_by_time() -> None:
+    known = candidates()
+    nothing = np.zeros_like(known.counts)
+    many = nothing.copy()
+    many[0] = 1000
+    for counts, share in ((nothing, known.weight), (many, 1.0)):
+        inputs = network_inputs(
+            Candidates(known.stack, known.weight, counts, known.change, known.mismatch, known.flows)
+        )
+        pair = carried_by_events(torch.from_numpy(inputs)[None])[0, 0].numpy()
+        # all events before the instant: the right key tells all
+        np.testing.assert_allclose(pair, (1 - share) * inputs[0] + share * inputs[1], atol=4e-3)
 
 
 def written(folder: Path, data: bytes, sha256: str | None = None) -> Path:

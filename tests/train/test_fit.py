@@ -13,6 +13,8 @@ from enhance.interpolate.network import CANDIDATES, INPUTS, RESIDUAL, load_netwo
 from enhance.train.data import Shard, make_shard
 from enhance.train.fit import (
     CURVE,
+    LEAST_ERROR,
+    SOFTNESS,
     STATE,
     Crops,
     Settings,
@@ -38,14 +40,26 @@ def pictures() -> list[Shard]:
     return [Shard(whole.inputs[:1, :, :96, :96], whole.truth[:1, :, :96, :96], whole.recipe)]
 
 
-def test_the_loss_of_equal_pictures_is_zero_and_grows_with_the_error() -> None:
+def test_the_loss_is_least_for_equal_pictures_and_counts_signal_and_light() -> None:
     truth = torch.full((1, 1, 4, 4), 0.5)
     losses = [float(fusion_loss(truth + error, truth)) for error in (0.0, 0.01, 0.1)]
-    assert losses[0] == 0
-    # by hand at 0.1: signal sqrt(0.1^2 + 0.01^2) - 0.01; light 0.318547 - 0.214041 (IEC 61966-2-1), likewise
-    light = np.hypot(0.318547 - 0.214041, 0.01) - 0.01
-    assert losses[2] == pytest.approx(0.5 * (np.hypot(0.1, 0.01) - 0.01 + light), rel=1e-4)
-    assert losses[1] < losses[2]
+    assert losses[0] == pytest.approx(np.log(LEAST_ERROR), rel=1e-5)
+    # by hand at 0.1: signal sqrt(0.1^2 + s^2) - s; light 0.318547 - 0.214041 (IEC 61966-2-1), likewise
+    error = np.mean([np.hypot(difference, SOFTNESS) - SOFTNESS for difference in (0.1, 0.318547 - 0.214041)])
+    assert losses[2] == pytest.approx(np.log(error + LEAST_ERROR), rel=1e-4)
+    assert losses[0] < losses[1] < losses[2]
+
+
+def test_halving_the_error_is_worth_the_same_on_a_hard_crop_as_on_an_easy_one() -> None:
+    truth = torch.full((2, 1, 4, 4), 0.5)
+    slopes = []
+    for size in (0.02, 0.2):
+        error = torch.full((2, 1, 1, 1), size, requires_grad=True)
+        fusion_loss(truth + error, truth).backward()
+        assert error.grad is not None
+        slopes.append(float((error.grad * error.detach()).sum()))
+    # d loss / d log(error): 10 times the error, yet of one size; without the logarithm it would differ 30 times
+    assert 0.5 < slopes[0] / slopes[1] < 2
 
 
 def test_the_rate_rises_then_falls_to_a_hundredth() -> None:
