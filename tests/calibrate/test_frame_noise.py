@@ -58,6 +58,17 @@ def test_a_lamp_that_drifts_is_no_noise():
     assert floor**2 + shot * 0.5 == pytest.approx((5 / 20_000) ** 2 + (1 / 255) ** 2 / 12 + 0.5 / 20_000, rel=0.15)
 
 
+def test_the_few_pixels_that_creep_without_an_event_are_no_noise():
+    pairs = noisy(20_000, 5.0, 8)
+    rng = np.random.default_rng(6)
+    for pair in pairs:
+        # one pixel in twenty changes by part of a threshold of 0.2
+        creep = (rng.random(SHAPE) < 0.05) * rng.uniform(-0.2, 0.2, SHAPE)
+        pair.second.image[:] *= np.exp(creep).astype(np.float32)
+    floor, shot = estimate_frame_noise(pairs, NO_EVENTS).value
+    assert floor**2 + shot * 0.5 == pytest.approx((5 / 20_000) ** 2 + (1 / 255) ** 2 / 12 + 0.5 / 20_000, rel=0.4)
+
+
 def test_frames_without_noise_keep_the_step_of_8_bits():
     floor, shot = estimate_frame_noise(noisy(1e9, 0.0, 16), NO_EVENTS).value
     assert floor == 0.001

@@ -77,10 +77,11 @@ def test_a_key_is_a_function_of_its_window_only(recorded):
     recording = recorded.recording
     frames = recording.frames
     codes = frames.codes.copy()
-    codes[2 * WINDOW + 2 :] = 7
-    start, end = (int(frames.start_us[k]) + 3_000 for k in (0, 2 * WINDOW + 2))
-    near = covering(replace(recording, frames=replace(frames, codes=codes)), start - 2_000, end - 100)
-    key = WINDOW + 1
+    codes[:2] = codes[2 * WINDOW + 3 :] = 7
+    start, end = int(frames.start_us[2]) + 3_000, int(frames.end_us[2 * WINDOW + 2]) + 3_000
+    # a ramp beyond the exposures counts as well
+    near = covering(replace(recording, frames=replace(frames, codes=codes)), start - 2_000, end + 2_000)
+    key = WINDOW + 2
     assert keys_of(near).picture(key).image.tobytes() == keys_of(recording).picture(key).image.tobytes()
 
 

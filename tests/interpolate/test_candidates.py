@@ -87,9 +87,11 @@ def test_an_accelerating_motion_is_followed_by_the_events_not_by_a_straight_line
         assert rms[f"moved from the {side}"] < 0.6 * rms[f"straight from the {side}"]
 
 
-def test_a_steady_motion_is_followed_by_a_straight_line_too(steady):
-    rms = errors(*steady, MIDDLE_US)
+@pytest.mark.parametrize("share", [0.2, 0.5, 0.7])
+def test_a_steady_motion_is_followed_by_a_straight_line_too(steady, share):
+    rms = errors(*steady, round(share * SPAN_US))
     assert rms["straight from the left"] < 0.5 * rms["blend"]
+    assert rms["straight from the right"] < 0.5 * rms["blend"]
 
 
 def test_a_carried_key_is_within_part_filled_thresholds_of_the_truth(steady):
