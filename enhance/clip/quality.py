@@ -17,7 +17,7 @@ DEFINITIONS = {
     "pictures' dB",
     "ssim": "Wang et al. 2004 (11x11 Gaussian window, sigma 1.5, K1 0.01, K2 0.03), of the same two pictures; mean",
     "psnr_moving": "as psnr, over moving pixels only: the 5x5 square around any event from 10 ms before the span to "
-    "20 ms after it, hot pixels and unsupported events left out",
+    "20 ms after it, hot pixels left out, and lone events where they would cover more than 5 % of the picture",
     "ssim_moving": "as ssim, the map's mean over moving pixels",
     "ceiling": "dB that a flawless picture would read against the captured frame: 20 log10(MAX / sigma), sigma being "
     "the frame's own noise",

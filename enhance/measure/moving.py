@@ -13,6 +13,10 @@ from enhance.recording import Events
 _SQUARE = 5
 
 
+#: Lone events may cover this share of the picture before they are left out of what counts as moving.
+STRAY_SHARE = 0.05
+
+
 def support_filter(
     events: Events,
     shape: tuple[int, int],
@@ -43,7 +47,10 @@ def support_filter(
 
 
 def moving_mask(events: Events, shape: tuple[int, int], window_us: int = 10_000) -> NDArray[np.bool_]:
-    """Mark the 5x5 square around every event that is not alone.
+    """Mark the 5x5 square around every event; where noise is thick, around every event that is not alone.
+
+    The noise filter also takes the sparse events of slow edges, and the figures of slow scenes with them. It is used
+    where the lone events would otherwise declare more than `STRAY_SHARE` of the picture to be moving.
 
     Parameters
     ----------
@@ -58,7 +65,13 @@ def moving_mask(events: Events, shape: tuple[int, int], window_us: int = 10_000)
     -------
     ndarray of bool, shape (H, W)
     """
-    kept = support_filter(events, shape, window_us)
+    every = _squares(events, shape)
+    supported = _squares(events.keep(support_filter(events, shape, window_us)), shape)
+    stray = int(every.sum()) - int(supported.sum())
+    return supported if stray > STRAY_SHARE * every.size else every
+
+
+def _squares(events: Events, shape: tuple[int, int]) -> NDArray[np.bool_]:
     hit = np.zeros(shape, np.uint8)
-    hit[events.y[kept], events.x[kept]] = 1
+    hit[events.y, events.x] = 1
     return cv2.dilate(hit, np.ones((_SQUARE, _SQUARE), np.uint8)).astype(bool)

@@ -25,10 +25,23 @@ def test_squares_are_cut_at_the_border():
     assert mask.sum() == 4 * 4 + 3 * 4
 
 
-def test_an_event_alone_in_time_or_place_does_not_move_anything():
-    lonely = events((0, 10, 20), (20_000, 11, 20), (20_001, 20, 30))
-    assert not moving_mask(lonely, (40, 30)).any()
-    assert moving_mask(lonely, (40, 30), window_us=20_000).any()
+def test_few_lone_events_count_as_moving_and_many_do_not():
+    # One lone event covers 25 of 9 600 pixels; noise of 2 % of the pixels would cover some 40 % of the picture
+    lonely = events((0, 10, 20), (20_000, 50, 60))
+    assert moving_mask(lonely, (120, 80)).sum() == 2 * 25
+    rng = np.random.default_rng(3)
+    pixels = rng.permutation(120 * 80)[:190]
+    noise = events(*((25_000 * k, p % 80, p // 80) for k, p in enumerate(pixels.tolist())))
+    assert not moving_mask(noise, (120, 80)).any()
+
+
+def test_the_window_of_the_noise_filter_is_the_callers():
+    rng = np.random.default_rng(4)
+    pixels = rng.permutation(40 * 30)[:40]
+    noise = [(25_000 * k, p % 30, p // 30) for k, p in enumerate(pixels.tolist())]
+    pair = [(2_000_000, 10, 20), (2_015_000, 11, 20)]
+    assert not moving_mask(events(*noise, *pair), (40, 30)).any()
+    assert moving_mask(events(*noise, *pair), (40, 30), window_us=20_000)[20, 10]
 
 
 def test_no_events_move_nothing():
