@@ -126,7 +126,7 @@ def _overlap(recording: Recording, rig: Rig) -> tuple[list[str], list[str]]:
     inside = (frames.start_us >= events.cover_start_us) & (frames.end_us <= events.cover_end_us)
     left = int((~inside).sum())
     if left:
-        return [], [f"events do not cover the exposure of {left} of {len(frames)} frames: these stay as captured"]
+        return [], [f"events do not cover the whole exposure of {left} of {len(frames)} frames; these stay as captured"]
     return [], []
 
 

@@ -15,6 +15,8 @@ from enhance.recording import By, Events, Frame, FrameSource, Kind, Picture
 from enhance.rig import Rig, RiggedEvents
 
 T = TypeVar("T")
+#: A fiftieth of an exposure without events, at either end, is still within what a measured clock leaves open.
+SLACK = 50
 #: Evidence kept: a window either side of a span, and a little for the steps between.
 _KEPT = 2 * WINDOW + 4
 #: Weight of a change the events did not see: none, but for the arithmetic.
@@ -55,7 +57,8 @@ class Keys:
         """Whether the events cover the key's exposure."""
         index = self.indices[key]
         start, end = int(self.frames.start_us[index]), int(self.frames.end_us[index])
-        return self.events is not None and self.events.covers(start, end)
+        slack = (end - start) // SLACK
+        return self.events is not None and self.events.covers(start + slack, end - slack)
 
     def span_covered(self, key: int) -> bool:
         """Whether the events cover the span from a key to the next."""

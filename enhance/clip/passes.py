@@ -257,11 +257,9 @@ def _notes(recording: Recording, rig: Rig, plan: Plan, counts: Counter[str]) -> 
     if rig.offset_us.value is None:
         notes.append(f"the clock of the events cannot be told ({rig.offset_us.evidence}): every picture is from frames")
     elif counts[Kind.CAPTURED]:
-        notes.append(
-            f"{counts[Kind.CAPTURED]} keys stay as captured: sharp already, or events do not cover their exposure"
-        )
+        notes.append(f"keys that stay as captured (sharp already, or not covered by events): {counts[Kind.CAPTURED]}")
     if counts["inserted from frames alone"]:
-        notes.append(f"{counts['inserted from frames alone']} pictures are inserted from frames alone, without events")
+        notes.append(f"pictures inserted from frames alone, without events: {counts['inserted from frames alone']}")
     for name in ("contrast_positive", "contrast_negative"):
         quantity = getattr(rig, name)
         if quantity.method == "assumed":

@@ -213,8 +213,8 @@ def test_frames_that_events_do_not_cover_stay_captured_and_are_counted(settings:
     assert [r["kind"] for r in table[0:13:4]] == ["captured", "captured", "captured", "deblurred"]
     assert table[1]["by"] == "frames"
     assert result.counts["captured"] == 3
-    assert any("3 keys stay as captured" in note for note in result.notes)
-    assert any("inserted from frames alone" in note for note in result.notes)
+    assert any("not covered by events): 3" in note for note in result.notes)
+    assert any("inserted from frames alone, without events" in note for note in result.notes)
 
 
 def test_no_overlap_at_all_is_an_error(settings: ClipSettings) -> None:
