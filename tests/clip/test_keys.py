@@ -100,8 +100,8 @@ def test_frames_that_are_no_keys_are_never_decoded(recorded):
 
 def test_an_exposure_that_events_do_not_cover_stays_as_captured(recorded):
     frames = recorded.recording.frames
-    # the sensor begins in the middle of frame 4's exposure and stops one microsecond before frame 12's end
-    part = covering(recorded.recording, int(frames.start_us[4]) + 6_000 + 3_000, int(frames.end_us[12]) - 1 + 3_000)
+    # the sensor begins in the middle of frame 4's exposure and stops a millisecond before the end of frame 12
+    part = covering(recorded.recording, int(frames.start_us[4]) + 6_000 + 3_000, int(frames.end_us[12]) - 1_000 + 3_000)
     keys = keys_of(part)
     for key in (0, 4, 12, 15):
         picture = keys.picture(key)
