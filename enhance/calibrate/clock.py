@@ -212,14 +212,17 @@ def _moments(pair: Pair, events: EventSource, offsets: NDArray[np.int64], contra
     low, high, ramp_us = int(offsets[0]), int(offsets[-1]), contrast.ramp_us
     pair, seen = thinned(pair, events.between(one.start_us - high - ramp_us, two.end_us - low + ramp_us))
     shape = pair.change.shape
+    usable = np.flatnonzero(pair.usable)
+    change = pair.change.ravel()[usable]
+    observed = float((change * change).sum())
     result = np.zeros((len(offsets), 3))
     for row, offset in enumerate(int(o) for o in offsets):
         middle = one.time_us - offset
         first = log_blur_ratio(seen, one.start_us - offset, one.end_us - offset, middle, contrast, shape)
         second = log_blur_ratio(seen, two.start_us - offset, two.end_us - offset, middle, contrast, shape)
-        predicted = (second - first)[pair.usable]
-        change = pair.change[pair.usable]
-        result[row] = predicted @ change, predicted @ predicted, change @ change
+        predicted = (second - first).ravel()[usable]
+        # Plain sums: a threaded dot product of so few numbers waits for its threads, and adds up in their order.
+        result[row] = (predicted * change).sum(), (predicted * predicted).sum(), observed
     return result
 
 
