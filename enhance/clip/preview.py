@@ -17,6 +17,8 @@ from enhance.settings import ClipSettings
 
 #: Keys the rig of a preview is measured on: enough for a look, few enough for half a minute.
 KEYS = 24
+#: Half of the stretch whose events are drawn, at the least and at the most, microseconds.
+SHORTEST_US, LONGEST_US = 500, 2_000
 
 
 def preview(settings: ClipSettings, folder: Path) -> list[Path]:
@@ -66,20 +68,21 @@ def _busiest(recording: Recording) -> int:
 
 
 def _drawn(recording: Recording, keys: Keys, key: int) -> Picture:
-    """Draw the events of a frame's exposure over it: brighter ones white, darker ones black, the frame dimmed grey."""
+    """Draw the events around a frame's middle over it: brighter ones red, darker ones blue, the frame dimmed grey."""
     frame = recording.frames.frame(keys.indices[key])
     events = Events.none()
     if keys.events is not None:
-        # A sharp frame has hardly any exposure: a short while around it shows where the edges are.
-        half = max(frame.exposure_us, 4_000) // 2
+        # All of an exposure's events would cover the picture; those of a short while are lines where the edges are.
+        half = min(max(frame.exposure_us // 16, SHORTEST_US), LONGEST_US)
         events = keys.events.between(frame.time_us - half, frame.time_us + half)
-    image = _overlay(luma(frame.image), events, recording.frames.light)
-    return Picture(image, frame.time_us, Kind.CAPTURED, By.FRAMES)
+    return Picture(_overlay(luma(frame.image), events, recording.frames.light), frame.time_us, Kind.CAPTURED, By.FRAMES)
 
 
 def _overlay(light: Image, events: Events, curve: Light) -> Image:
-    codes = 0.3 * curve.full_scale + 0.4 * np.clip(curve.to_codes(light), 0, curve.full_scale)
+    grey = 0.25 * curve.full_scale + 0.5 * np.clip(curve.to_codes(light), 0, curve.full_scale)
+    codes = np.repeat(grey[..., None], 3, axis=2)
+    red, blue = np.array([[1.0, 0.15, 0.1], [0.1, 0.3, 1.0]]) * curve.full_scale
     rising = events.polarity > 0
-    codes[events.y[rising], events.x[rising]] = curve.full_scale
-    codes[events.y[~rising], events.x[~rising]] = curve.black
+    codes[events.y[rising], events.x[rising]] = red
+    codes[events.y[~rising], events.x[~rising]] = blue
     return curve.to_linear(codes)
