@@ -121,6 +121,7 @@ def describe(
         },
         "training": {
             "steps": training.step,
+            "kept_step": max(training.curve, key=lambda row: row["held_out_network"])["step"],
             "batch": settings.batch,
             "rate": fit.RATE,
             "weight_decay": fit.WEIGHT_DECAY,
@@ -130,7 +131,7 @@ def describe(
             "minutes": round(training.seconds / 60, 1),
         },
         "held_out": {
-            "definition": "mean PSNR in dB of whole pictures against the sharp truth, in the frames' own curve",
+            "definition": "Mean PSNR in dB of whole pictures against the sharp truth, in the frames' own curve",
             "by_kind": _rounded(by_kind),
             "mean": _rounded({"all kinds": score.mean_over_groups(by_kind)})["all kinds"],
             "by_model": _rounded(score.score(network, held_out, _by_model)),
@@ -190,14 +191,14 @@ def readable(card: Mapping[str, Any]) -> str:
         "",
         f"{fitted['steps']} steps of {fitted['batch']} crops in {fitted['minutes']:g} minutes on {fitted['threads']} "
         f"thread; AdamW, rate {fitted['rate']:g} along a cosine, decay {fitted['weight_decay']:g}, weights averaged "
-        f"({fitted['averaged']:g}); Charbonnier loss (softness {fitted['softness']:g}) in sRGB signal and in linear "
-        "light alike. Again:",
+        f"({fitted['averaged']:g}), those after step {fitted['kept_step']} kept; logarithm of each crop's Charbonnier "
+        f"error (softness {fitted['softness']:g}) in sRGB signal and in linear light alike. Again:",
         "",
         f"    {card['command']}",
         "",
         "## Held-out recordings",
         "",
-        f"{held['definition'].capitalize()}.",
+        f"{held['definition']}.",
         "",
         f"| scenes | {' | '.join(name.replace('_', ' ') for name in score.SCORED)} |",
         f"|---|{'---|' * len(score.SCORED)}",
