@@ -364,7 +364,7 @@ class _Progress:
         if now - self._told < LINE_EVERY_S:
             return
         self._told = now
-        left = f", about {duration_text((now - self._began) * (total - done) / done)} left" if done else ""
+        left = f", {duration_text((now - self._began) * (total - done) / done)} left" if done else ""
         _complain(f"{path}: {what}: {done} of {total}{left}")
 
     def close(self) -> None:
