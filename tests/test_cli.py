@@ -154,7 +154,7 @@ def test_away_from_a_terminal_progress_is_plain_lines_few_and_far_between(monkey
         progress(Path("a.toml"), done, 100, "pictures")
     lines = capsys.readouterr().err.splitlines()
     assert lines[0] == "a.toml: pictures: 0 of 100"
-    assert lines[1] == "a.toml: pictures: 5 of 100, about 1 min 35 s left"
+    assert lines[1] == "a.toml: pictures: 5 of 100, 1 min 35 s left"
     assert len(lines) == 100 / cli.LINE_EVERY_S
 
 
