@@ -210,7 +210,7 @@ def _moments(pair: Pair, events: EventSource, offsets: NDArray[np.int64], contra
     """(cross, energy of the prediction, energy of the change) for each offset, shape (offsets, 3)."""
     one, two = pair.first, pair.second
     low, high, ramp_us = int(offsets[0]), int(offsets[-1]), contrast.ramp_us
-    pair, seen = thinned(pair, events.between(one.start_us - high - ramp_us, two.end_us - low + ramp_us))
+    pair, seen = thinned(pair, events.between(one.start_us - high - ramp_us, two.end_us - low + 2 * ramp_us))
     shape = pair.change.shape
     usable = np.flatnonzero(pair.usable)
     change = pair.change.ravel()[usable]

@@ -92,7 +92,7 @@ def _equations(pair: Pair, events: EventSource, contrast: Contrast) -> Rows:
     """Rows of the regression of one pair: (N+, -N-, [N+ > 0], -[N- > 0]) and the latents' log change."""
     one, two = pair.first, pair.second
     ramp = contrast.ramp_us
-    pair, seen = thinned(pair, events.between(one.start_us - ramp, max(two.end_us, two.time_us) + ramp))
+    pair, seen = thinned(pair, events.between(one.start_us - ramp, max(two.end_us, two.time_us) + 2 * ramp))
     shape = pair.change.shape
     first = log_blur_ratio(seen, one.start_us, one.end_us, one.time_us, contrast, shape)
     second = log_blur_ratio(seen, two.start_us, two.end_us, two.time_us, contrast, shape)

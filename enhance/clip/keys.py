@@ -65,7 +65,7 @@ class Keys:
         return self.events is not None and self.events.covers(self.times_us[key], self.times_us[key + 1])
 
     def span_events(self, key: int) -> Events:
-        """Events of the span from a key to the next, and a ramp beyond either end."""
+        """Events of the span from a key to the next, and as far beyond either end as ramps reach."""
         return self._near(self.times_us[key], self.times_us[key + 1])
 
     def picture(self, key: int) -> Picture:
@@ -133,7 +133,7 @@ class Keys:
         if self.events is None:
             return Events.none()
         ramp = self.rig.contrast.ramp_us
-        return self.events.between(start_us - ramp, end_us + ramp)
+        return self.events.between(start_us - ramp, end_us + 2 * ramp)
 
 
 def _captured(frame: Frame, noise: np.ndarray) -> Evidence:

@@ -82,7 +82,7 @@ def change_evidence(
     Parameters
     ----------
     events : Events
-        Those between the instants, and with a ramp those up to `ramp_us` before and after.
+        Those between the instants, and with a ramp those up to `ramp_us` before and twice that after.
     interval_us : tuple of int
         The instants.
     contrast : Contrast

@@ -30,7 +30,8 @@ def deblur(
     image : ndarray of float32, shape (H, W) or (H, W, 3)
         Linear light. Colour: every channel is changed by the same ratio, the one light changes by.
     events : Events
-        Those of the exposure, up to `time_us` if it lies outside, and with a ramp those up to `ramp_us` beyond.
+        Those of the exposure, up to `time_us` if it lies outside, and with a ramp those up to `ramp_us` before
+        and twice that after.
     start_us, end_us, time_us : int
         The exposure and the instant.
     contrast : Contrast

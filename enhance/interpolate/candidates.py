@@ -75,7 +75,7 @@ class Span:
     interval_us : tuple of int
         Their times.
     events : Events
-        Those between the keys, and with a ramp those up to `ramp_us` before and after.
+        Those between the keys, and with a ramp those up to `ramp_us` before and twice that after.
     contrast : Contrast
     """
 

@@ -26,7 +26,7 @@ def log_sum(
     Parameters
     ----------
     events : Events
-        Those between, and with a ramp those up to `ramp_us` before and after.
+        Those between, and with a ramp those up to `ramp_us` before and twice that after.
     start_us, end_us : int
         The instants, in either order.
     contrast : Contrast
@@ -56,7 +56,8 @@ def log_blur_ratio(
     Parameters
     ----------
     events : Events
-        Those of the exposure, for an instant outside it those between, and with a ramp those up to `ramp_us` beyond.
+        Those of the exposure, for an instant outside it those between, and with a ramp those up to `ramp_us`
+        before and twice that after.
     start_us, end_us : int
         The exposure. Equal: a sharp frame at that time.
     time_us : int
@@ -73,7 +74,7 @@ def log_blur_ratio(
     if end_us <= start_us:
         return -log_sum(events, start_us, time_us, contrast, shape)
     ramp = contrast.ramp_us
-    seen = events.between(start_us - ramp, end_us + ramp)
+    seen = events.between(start_us - ramp, end_us + 2 * ramp)
     interval = (start_us, end_us)
     mean = exponential_mean(seen.t_us, seen.x, seen.y, seen.polarity, interval, contrast.thresholds, shape, ramp)
     # The mean counts from the last event before the exposure: what was part-filled at its start is in it already.
@@ -85,5 +86,5 @@ def log_blur_ratio(
 
 def _filled(events: Events, time_us: int, contrast: Contrast, shape: tuple[int, int]) -> NDArray[np.float64]:
     ramp = contrast.ramp_us
-    near = events.between(time_us - ramp, time_us + ramp)
+    near = events.between(time_us - ramp, time_us + 2 * ramp)
     return part_filled(near.t_us, near.x, near.y, near.polarity, time_us, contrast.thresholds, shape, ramp)

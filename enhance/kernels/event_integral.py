@@ -5,8 +5,10 @@ of a staircase are finite sums, so nothing here is approximated. Because a step 
 only the events cost anything.
 
 The staircase is late: at an event the light *has arrived* at the new level; on the way there it had left the old one.
-With a ramp, light runs in a straight line (in log light) from one event to the next, or over the last `ramp_us` before
-the event where the pixel had been quiet for longer. Both forms are exact sums.
+With a ramp, light runs in a straight line (in log light) from one event to the next. Where the pixel had been quiet for
+longer, the line begins a ramp before the event: as long as `BURST` times the time to the pixel's next event of the same
+sign, because an edge fills each of its thresholds in about the same time, and at most `ramp_us`. Both forms are exact
+sums.
 
 References
 ----------
@@ -24,6 +26,9 @@ from numpy.typing import NDArray
 
 #: Before any event: far enough in the past for every ramp, near enough not to overflow.
 _LONG_AGO = -(2**62)
+#: Ramp of the first event of a burst, in intervals to its second: 1.5 was best on simulated recordings (1: -0.02 dB,
+#: 2: -0.05 dB, no look ahead: -0.26 dB).
+BURST = 1.5
 #: exp(S) stays within these: only a pixel that fires for no reason leaves them, and its numbers must stay finite.
 _LEAST_GAIN, _MOST_GAIN = 1e-12, 1e12
 
@@ -42,17 +47,28 @@ def _ramp_excess(gain, step, ramp, begin, end):  # type: ignore[no-untyped-def]
 
 
 @njit(cache=True, nogil=True)
-def _exponential_mean(t_us, x, y, polarity, start_us, end_us, ramp_us, up, down, gain, area, last):  # type: ignore[no-untyped-def]
+def _ramps(t_us, x, y, polarity, ramp_us, burst, next_us, next_sign, out):  # type: ignore[no-untyped-def]
+    # backwards: what comes next at each pixel is known when its event is reached
+    for i in range(x.size - 1, -1, -1):
+        row, column, t = y[i], x[i], t_us[i]
+        out[i] = ramp_us
+        if next_sign[row, column] == polarity[i]:
+            out[i] = max(1.0, min(float(ramp_us), burst * (next_us[row, column] - t)))
+        next_us[row, column], next_sign[row, column] = t, polarity[i]
+
+
+@njit(cache=True, nogil=True)
+def _exponential_mean(t_us, x, y, polarity, start_us, end_us, ramps, up, down, gain, area, last):  # type: ignore[no-untyped-def]
     # gain: exp(S) now; area: integral of exp(S) so far, counted as if the present gain held until the end,
     # so that an event only has to correct the rest of the exposure.
     length = end_us - start_us
     for i in range(x.size):
         row, column, t = y[i], x[i], t_us[i]
         step = up if polarity[i] > 0 else down
-        if ramp_us > 0:
-            ramp = min(ramp_us, t - last[row, column])
+        if ramps.size > 0:
+            ramp = min(ramps[i], float(t - last[row, column]))
             last[row, column] = t
-            begin, end = max(t - ramp, start_us), min(t, end_us)
+            begin, end = max(t - ramp, float(start_us)), float(min(t, end_us))
             if end > begin:
                 origin = t - ramp
                 area[row, column] += _ramp_excess(gain[row, column], step, ramp, begin - origin, end - origin) / length
@@ -64,16 +80,29 @@ def _exponential_mean(t_us, x, y, polarity, start_us, end_us, ramp_us, up, down,
 
 
 @njit(cache=True, nogil=True)
-def _part_filled(t_us, x, y, polarity, time_us, ramp_us, up, down, filled, last):  # type: ignore[no-untyped-def]
+def _part_filled(t_us, x, y, polarity, time_us, ramps, up, down, filled, last):  # type: ignore[no-untyped-def]
     for i in range(x.size):
         row, column, t = y[i], x[i], t_us[i]
         before = last[row, column]
         last[row, column] = t
-        ramp = min(ramp_us, t - before)
+        ramp = min(ramps[i], float(t - before))
         # Only the first event from the instant on has a ramp that can reach back to it. One exactly at the instant
         # belongs to the interval that begins there: the light has arrived, but no sum up to here has counted it.
         if t >= time_us and before < time_us and t - ramp < time_us:
             filled[row, column] = (up if polarity[i] > 0 else down) * (time_us - (t - ramp)) / ramp
+
+
+def _own_ramps(
+    t_us: NDArray[np.int64],
+    x: NDArray[np.uint16],
+    y: NDArray[np.uint16],
+    polarity: NDArray[np.int8],
+    shape: tuple[int, int],
+    ramp_us: int,
+) -> NDArray[np.float64]:
+    out = np.empty(len(t_us))
+    _ramps(t_us, x, y, polarity, ramp_us, BURST, np.zeros(shape, np.int64), np.zeros(shape, np.int8), out)
+    return out
 
 
 def event_counts(
@@ -112,7 +141,7 @@ def exponential_mean(
     Parameters
     ----------
     t_us, x, y, polarity : ndarray, shape (N,)
-        Events, sorted: those of the interval, and with a ramp those up to `ramp_us` before and after it.
+        Events, sorted: those of the interval, and with a ramp those up to `ramp_us` before and twice that after it.
     interval_us : tuple of int
         Start and end; the end lies after the start.
     contrast : tuple of float
@@ -121,7 +150,7 @@ def exponential_mean(
         H, W.
     ramp_us : int
         0: a staircase. Otherwise light reaches each event along a straight line in log light that begins at the
-        pixel's event before, or this long before the event if that is later.
+        pixel's event before, or a ramp of at most this length before the event if that is later.
 
     Returns
     -------
@@ -129,11 +158,12 @@ def exponential_mean(
         ``(1 / T) * integral of exp(S(t)) dt``.
     """
     gain, area = np.ones(shape), np.ones(shape)
-    last = np.full(shape if ramp_us else (1, 1), _LONG_AGO, np.int64)
     start, end = interval_us
-    _exponential_mean(
-        t_us, x, y, polarity, start, end, ramp_us, float(contrast[0]), -float(contrast[1]), gain, area, last
-    )
+    # Counted from the start: floats would not hold epoch-sized times.
+    t_us, end = t_us - start, end - start
+    last = np.full(shape if ramp_us else (1, 1), _LONG_AGO, np.int64)
+    ramps = _own_ramps(t_us, x, y, polarity, shape, ramp_us) if ramp_us else np.empty(0)
+    _exponential_mean(t_us, x, y, polarity, 0, end, ramps, float(contrast[0]), -float(contrast[1]), gain, area, last)
     return area
 
 
@@ -152,7 +182,7 @@ def part_filled(
     Parameters
     ----------
     t_us, x, y, polarity : ndarray, shape (N,)
-        Events of ``[time - ramp, time + ramp)``, sorted.
+        Events of ``[time - ramp, time + 2 ramp)``, sorted.
     time_us : int
         The instant.
     contrast : tuple of float
@@ -168,6 +198,8 @@ def part_filled(
         To be added to the sum of the events up to the instant.
     """
     filled = np.zeros(shape)
+    t_us = t_us - time_us
     last = np.full(shape, _LONG_AGO, np.int64)
-    _part_filled(t_us, x, y, polarity, time_us, ramp_us, float(contrast[0]), -float(contrast[1]), filled, last)
+    ramps = _own_ramps(t_us, x, y, polarity, shape, ramp_us)
+    _part_filled(t_us, x, y, polarity, 0, ramps, float(contrast[0]), -float(contrast[1]), filled, last)
     return filled

@@ -2,7 +2,7 @@ import numpy as np
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
-from enhance.kernels.event_integral import event_counts, exponential_mean, part_filled
+from enhance.kernels.event_integral import BURST, event_counts, exponential_mean, part_filled
 
 
 def columns(t, polarity, x=None, y=None):
@@ -59,9 +59,11 @@ def test_epoch_sized_times_lose_nothing():
 def ramped_light(t, p, times, c, ramp):
     """Log light at many times, ramp by ramp, with plain Python."""
     level, last, value = 0.0, -np.inf, np.full(len(times), np.nan)
-    for ti, pi in zip(t, p, strict=True):
+    for k, (ti, pi) in enumerate(zip(t, p, strict=True)):
         step = c[0] if pi > 0 else -c[1]
-        begin = max(last, ti - ramp)
+        burst = k + 1 < len(t) and p[k + 1] == pi
+        own = min(ramp, BURST * (t[k + 1] - ti)) if burst else ramp
+        begin = max(last, ti - own)
         inside = (times >= last) & (times < ti)
         value[inside] = level + step * np.clip((times[inside] - begin) / (ti - begin), 0, 1)
         level, last = level + step, ti
@@ -90,7 +92,7 @@ def test_part_filled_is_the_light_between_two_events():
     p = rng.choice([-1, 1], 20)
     # some of the instants are those of events: half-open, such an event is not summed but wholly filled
     for time in [*range(500, 12_500, 333), *(int(k) for k in t)]:
-        near = (t >= time - ramp) & (t < time + ramp)
+        near = (t >= time - ramp) & (t < time + 2 * ramp)
         steps = sum(c[0] if k > 0 else -c[1] for k, ti in zip(p, t, strict=True) if ti < time)
         expected = ramped_light(t, p, np.array([float(time)]), c, ramp)[0]
         filled = part_filled(*columns(t[near], p[near]), time, c, (1, 1), ramp)
