@@ -190,6 +190,25 @@ def test_one_frame_gives_a_still_and_exit_code_zero(home: Path) -> None:
     assert not (home / "out" / "slow-motion.mp4").exists()
 
 
+def test_a_video_with_its_own_times_gives_the_same_pictures_as_the_images(home: Path) -> None:
+    assert main(["run", str(home / "job.toml")]) == 0
+    of_images = {p.name: p.read_bytes() for p in (home / "out" / "stills").glob("*.png")}
+    as_video(home)
+    # the video counts from 0, the table from the middle of the scene: 9 ms of clock lie between
+    replace_in_job(home, 'offset = "-3 ms"', 'offset = "-12 ms"')
+    replace_in_job(home, 'folder = "out"', 'folder = "out-video"')
+    assert main(["run", str(home / "job.toml")]) == 0
+    of_video = {p.name: p.read_bytes() for p in (home / "out-video" / "stills").glob("*.png")}
+    assert len(of_video) == len(of_images)
+    for (name, image), (shifted, other) in zip(sorted(of_images.items()), sorted(of_video.items()), strict=True):
+        assert int(name[:16]) - int(shifted[:16]) == 9_000
+        assert pixels(image) == pixels(other)
+
+
+def pixels(png: bytes) -> bytes:
+    return cv2.imdecode(np.frombuffer(png, np.uint8), cv2.IMREAD_UNCHANGED).tobytes()
+
+
 def test_a_failing_job_does_not_stop_the_rest(home: Path, capsys: pytest.CaptureFixture[str]) -> None:
     shutil.copytree(home / "frames", home / "spoiled")
     truncate(home / "spoiled" / "000003.png")
