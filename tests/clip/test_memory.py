@@ -10,7 +10,7 @@ import numpy as np
 import pytest
 
 pytestmark = pytest.mark.slow
-WIDTH, HEIGHT, SECONDS, RATE = 346, 260, 60, 25
+WIDTH, HEIGHT, SECONDS, RATE = 346, 260, 60, 10
 JOB = """
 title = "A minute"
 [frames]
@@ -40,7 +40,7 @@ def write_frames(folder: Path) -> None:
     for k in range(SECONDS * RATE):
         shifted = np.roll(texture, 3 * k, axis=1)[:, :WIDTH]
         cv2.imwrite(str(folder / "frames" / f"{k:06d}.png"), shifted.astype(np.uint8))
-        lines.append(f"{k},{k * 40_000},{k * 40_000 + 20_000}")
+        lines.append(f"{k},{k * 100_000},{k * 100_000 + 20_000}")
     (folder / "frames.csv").write_text("\n".join(lines) + "\n")
 
 
