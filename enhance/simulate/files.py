@@ -21,12 +21,15 @@ from enhance.simulate.sensor import EventSensor
 
 #: Events a chunk: short windows read fast from it.
 CHUNK = 16_384
+#: Written first: what stands beside it was simulated and may be replaced.
+_MARK = "truth.toml"
 
 
 def write_recording(simulated: Simulated, folder: str | Path) -> Path:
     """Lay a simulated recording down: ``frames/*.png``, ``frames.csv``, ``events.h5``, ``truth.toml``, ``job.toml``.
 
-    Files of these names are replaced, each at once.
+    Files of these names are replaced, each at once, where they are an earlier copy's: ``truth.toml`` marks it, and is
+    written first. Nobody's own recording is written over.
 
     Parameters
     ----------
@@ -42,13 +45,14 @@ def write_recording(simulated: Simulated, folder: str | Path) -> Path:
     Raises
     ------
     WriteError
-        If a file cannot be written, or ``frames`` holds pictures of something else.
+        If a file cannot be written, or the folder holds a recording, or ``frames`` pictures, of something else.
     """
     folder = Path(folder)
     # a simulated recording always lies in memory
     frames = cast(FrameArray, simulated.recording.frames)
     events = cast(EventArray, simulated.recording.events)
     names = [f"{index:06d}.png" for index in range(len(frames))]
+    _refuse_strangers(folder)
     try:
         (folder / "frames").mkdir(parents=True, exist_ok=True)
         strangers = sorted({path.name for path in (folder / "frames").iterdir()} - set(names))
@@ -59,14 +63,25 @@ def write_recording(simulated: Simulated, folder: str | Path) -> Path:
             f"{folder / 'frames'}: holds {len(strangers)} files that are not part of this recording, such as "
             f"{strangers[0]}; expected an empty folder or an earlier copy. Empty it or choose another."
         )
+    _write(folder / _MARK, _truth(simulated).encode())
     for name, codes in zip(names, frames.codes, strict=True):
         _write(folder / "frames" / name, _png(codes))
     rows = (f"{name},{start},{end}" for name, start, end in zip(names, frames.start_us, frames.end_us, strict=True))
     _write(folder / "frames.csv", "\n".join(["frame,start_us,end_us", *rows, ""]).encode())
     _replace(folder / "events.h5", lambda path: _write_events(path, events))
-    _write(folder / "truth.toml", _truth(simulated).encode())
     _write(folder / "job.toml", _job(simulated, frames, events).encode())
     return folder / "job.toml"
+
+
+def _refuse_strangers(folder: Path) -> None:
+    """Refuse a folder with files of our names that no earlier copy left: they may be somebody's own recording."""
+    found = [name for name in ("events.h5", "frames.csv", "job.toml") if (folder / name).exists()]
+    found += [f"frames/{path.name}" for path in sorted(folder.glob("frames/*"))]
+    if found and not (folder / _MARK).exists():
+        raise WriteError(
+            f"{folder}: holds {found[0]} without {_MARK} beside it, so it is no simulated recording and is not "
+            "replaced; expected an empty folder or an earlier copy. Choose another folder."
+        )
 
 
 def demo_recording(folder: str | Path) -> Path:

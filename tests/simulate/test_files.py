@@ -75,7 +75,26 @@ def test_writing_again_gives_the_same_bytes_and_leaves_nothing_behind(small, tmp
             assert (first / path).read_bytes() == (second / path).read_bytes()
 
 
+@pytest.mark.parametrize("name", ["events.h5", "frames.csv", "job.toml", "frames/000000.png"])
+def test_a_recording_of_somebody_is_not_written_over(small, tmp_path, name):
+    (tmp_path / name).parent.mkdir(exist_ok=True)
+    (tmp_path / name).write_bytes(b"measured")
+    with pytest.raises(WriteError, match=rf"holds {name} without truth\.toml beside it"):
+        write_recording(small, tmp_path)
+    assert [path for path in tmp_path.rglob("*") if path.is_file()] == [tmp_path / name]
+    assert (tmp_path / name).read_bytes() == b"measured"
+
+
+def test_an_earlier_copy_is_replaced(small, tmp_path):
+    job = write_recording(small, tmp_path)
+    before = (tmp_path / "events.h5").read_bytes()
+    (tmp_path / "events.h5").write_bytes(b"cut short")
+    assert write_recording(small, tmp_path) == job
+    assert (tmp_path / "events.h5").read_bytes() == before
+
+
 def test_pictures_of_something_else_are_not_mixed_in(small, tmp_path):
+    (tmp_path / "truth.toml").touch()
     (tmp_path / "frames").mkdir()
     (tmp_path / "frames" / "holiday.png").touch()
     with pytest.raises(WriteError, match=r"holds 1 files that are not part of this recording, such as holiday\.png"):
@@ -94,7 +113,7 @@ def test_a_failed_write_leaves_no_half_file(small, tmp_path, monkeypatch):
         raise OSError(28, "No space left on device")
 
     monkeypatch.setattr("os.replace", full)
-    with pytest.raises(WriteError, match=r"000000\.png: cannot be written .*No space left.* Free some space"):
+    with pytest.raises(WriteError, match=r"truth\.toml: cannot be written .*No space left.* Free some space"):
         write_recording(small, tmp_path)
     assert [path for path in tmp_path.rglob("*") if path.is_file()] == []
 
