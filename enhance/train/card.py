@@ -43,7 +43,7 @@ LIMITS = (
 
 
 def write_card(
-    training: fit.Training, held_out: Sequence[Shard], recordings: int, minutes: float, folder: Path
+    training: fit.Training, held_out: Sequence[Shard], recordings: int, minutes: float, folder: Path, note: str = ""
 ) -> Path:
     """Write the best weights with their card, for machines and for readers.
 
@@ -58,6 +58,8 @@ def write_card(
         Asked for.
     folder : Path
         Holds the best weights; gets ``fusion.safetensors``, ``fusion.json``, ``fusion.md``.
+    note : str
+        What else is to be known of the data.
 
     Returns
     -------
@@ -72,6 +74,8 @@ def write_card(
     _write_json({"sha256": hashlib.sha256(data).hexdigest()}, path)
     network = load_network(path)
     card = describe(network, training, held_out, recordings, minutes) | {"sha256": hashlib.sha256(data).hexdigest()}
+    if note:
+        card["data"]["recipe"].append(note)
     _write_json(card, path)
     with whole_file(path.with_suffix(".md")) as partial:
         partial.write_text(readable(card), encoding="utf-8")
@@ -192,7 +196,8 @@ def readable(card: Mapping[str, Any]) -> str:
         f"{fitted['steps']} steps of {fitted['batch']} crops in {fitted['minutes']:g} minutes on {fitted['threads']} "
         f"thread; AdamW, rate {fitted['rate']:g} along a cosine, decay {fitted['weight_decay']:g}, weights averaged "
         f"({fitted['averaged']:g}), those after step {fitted['kept_step']} kept; logarithm of each crop's Charbonnier "
-        f"error (softness {fitted['softness']:g}) in sRGB signal and in linear light alike. Again:",
+        f"error (softness {fitted['softness']:g}) in sRGB signal and in linear light alike. Again (steps are "
+        "timed to fit the minutes, so another machine takes more or fewer):",
         "",
         f"    {card['command']}",
         "",
