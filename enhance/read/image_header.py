@@ -85,6 +85,12 @@ def _png(file: BinaryIO) -> Header:
     width, height, depth, colour = struct.unpack(">IIBB", file.read(26)[16:])
     if colour not in _PNG_COLOURS:
         raise HeaderError("has a damaged header")
+    # The chunks' lengths alone lead to the end mark of a whole file: a copy cut short is told before the night.
+    file.seek(8)
+    kind = b""
+    while kind != b"IEND":
+        length, kind = struct.unpack(">I4s", file.read(8))
+        file.seek(length + 4, 1)
     channels, alpha = _PNG_COLOURS[colour]
     return Header(width, height, max(depth, 8), channels, alpha)
 

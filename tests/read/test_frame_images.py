@@ -116,6 +116,19 @@ def test_a_cut_picture_is_named(tmp_path, suffix, share):
         opened(tmp_path, 2).frame(1)
 
 
+def test_a_cut_png_is_named_before_it_is_decoded(tmp_path):
+    for i in range(2):
+        cv2.imwrite(str(tmp_path / f"{i}.png"), RAMP)
+    data = (tmp_path / "1.png").read_bytes()
+    assert data[-8:-4] == b"IEND"
+    # trailing bytes harm nothing; without the end mark it is cut
+    (tmp_path / "1.png").write_bytes(data + b"more")
+    assert len(opened(tmp_path, 2)) == 2
+    (tmp_path / "1.png").write_bytes(data[:-13])
+    with pytest.raises(FramesError, match=r"1\.png is cut short"):
+        opened(tmp_path, 2)
+
+
 def test_a_damaged_picture_is_named(tmp_path):
     cv2.imwrite(str(tmp_path / "0.png"), np.random.default_rng(0).integers(0, 255, (40, 60), dtype=np.uint8))
     data = bytearray((tmp_path / "0.png").read_bytes())
@@ -143,7 +156,11 @@ def test_a_picture_that_changed_since_it_was_opened_is_noticed(tmp_path):
         (b"GIF89a" + b"\0" * 50, "0.png is not a PNG, TIFF or JPEG file"),
         (b"\x89PNG\r\n\x1a\n\0\0", "0.png is cut short"),
         (b"\x89PNG\r\n\x1a\n\0\0\0\rIHDR" + struct.pack(">IIBB", 5, 5, 8, 9), "0.png has a damaged header"),
-        (b"\x89PNG\r\n\x1a\n\0\0\0\rIHDR" + struct.pack(">IIBB", 10**6, 10**6, 8, 0), "says 1000000 x 1000000 pixels"),
+        # compression, filter, interlacing and checksum of the header, then the end mark
+        (
+            b"\x89PNG\r\n\x1a\n\0\0\0\rIHDR" + struct.pack(">IIBB", 10**6, 10**6, 8, 0) + b"\0" * 7 + b"\0\0\0\0IEND",
+            "says 1000000 x 1000000 pixels",
+        ),
         (b"\xff\xd8\xff\xda\0\0", "0.png has a damaged header"),
         (b"\xff\xd8\xff\xc0\0\x11\x0c\0\x05\0\x05\x01", "has 1 channels of 12 bit, expected grey or R, G, B of 8 bit"),
         (b"II\x07\0\0\0\0\0", "0.png has a damaged header"),
