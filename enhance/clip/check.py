@@ -8,6 +8,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from enhance.calibrate import known_rig
+from enhance.clip.keys import SLACK
 from enhance.clip.plan import make_plan
 from enhance.clip.source import events_on_frames, opened
 from enhance.errors import EnhanceError, JobError
@@ -76,7 +77,7 @@ def _look(recording: Recording, settings: ClipSettings) -> Findings:
     mistakes, warnings = _overlap(recording, rig)
     warnings += [*frames.notes, *recording.events.notes, *plan.remarks]
     if len(frames) == 1:
-        warnings.append("one frame only: stills are made, no clip")
+        warnings.append("one frame only: no clip is made")
     if settings.hold_out >= len(frames):
         warnings.append(f"measure.hold_out = {settings.hold_out} leaves no frame between keys: no figures are made")
     if settings.network != "off" and not mistakes:
@@ -88,7 +89,7 @@ def _look(recording: Recording, settings: ClipSettings) -> Findings:
             mistakes.append(str(error))
     pictures = len(plan.pictures)
     seconds, size = _cost(recording, settings, pictures)
-    facts = [*_facts(recording), f"{pictures} pictures planned"]
+    facts = [*_facts(recording), f"{pictures} pictures planned, about {max(size / 1e6, 0.1):.1f} MB of outputs"]
     return Findings(tuple(facts), tuple(warnings), tuple(mistakes), pictures, seconds, size)
 
 
@@ -123,7 +124,9 @@ def _overlap(recording: Recording, rig: Rig) -> tuple[list[str], list[str]]:
             f"events and frames do not overlap: events run from {events.cover_start_us} to {events.cover_end_us} us, "
             f'frames from {first} to {last} us; check events.time_unit and frames.times, or set rig.clock = "estimate"'
         ], []
-    inside = (frames.start_us >= events.cover_start_us) & (frames.end_us <= events.cover_end_us)
+    # as `Keys.covered` does
+    slack = (frames.end_us - frames.start_us) // SLACK
+    inside = (frames.start_us + slack >= events.cover_start_us) & (frames.end_us - slack <= events.cover_end_us)
     left = int((~inside).sum())
     if left:
         return [], [f"events do not cover the whole exposure of {left} of {len(frames)} frames; these stay as captured"]

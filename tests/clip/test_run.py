@@ -254,9 +254,19 @@ def test_check_knows_the_job_beforehand(settings: ClipSettings) -> None:
     assert "frames: 8 of 112 x 96, grey, 40.000 a second, 0.187 s, exposure 12.000 ms" in findings.facts[0]
     assert findings.seconds > 0
     assert findings.bytes > 29 * 112 * 96 * 2
+    assert findings.facts[-1] == f"29 pictures planned, about {findings.bytes / 1e6:.1f} MB of outputs"
     assert not settings.output.folder.exists()
     wrong = clip.check(replace(settings, rig=replace(settings.rig, offset_us=10_000_000)))
     assert "do not overlap" in wrong.mistakes[0]
+
+
+@pytest.mark.parametrize(("late_us", "left"), [(0, 0), (240, 0), (241, 1)])
+def test_check_counts_as_uncovered_what_the_run_leaves_captured(settings: ClipSettings, late_us, left) -> None:
+    # the sensor begins this much after the first exposure of 12 ms, of which a fiftieth is forgiven
+    late = replace(settings, rig=replace(settings.rig, offset_us=6_000 + late_us))
+    told = [w for w in clip.check(late).warnings if "do not cover" in w]
+    assert told == [f"events do not cover the whole exposure of {left} of 8 frames; these stay as captured"] * left
+    assert run(late).counts.get("captured", 0) == left
 
 
 def test_preview_shows_a_key_an_inserted_picture_and_the_events(settings: ClipSettings, tmp_path: Path) -> None:
