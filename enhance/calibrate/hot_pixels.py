@@ -20,6 +20,9 @@ TIMES_NEIGHBOURS, LEAST_RATE_HZ, LEAST_SHARE = 8.0, 20.0, 0.8
 #: Which of the 8 neighbours, from the busiest down, is compared: two hot pixels may stand side by side, while along the
 #: thinnest line that moves both neighbours on it are busy.
 COMPARED = 2
+#: Where the scene is busy a hot pixel does not stand out of the whole, but of the slices in which those neighbours are
+#: quiet (this many events at the most): there must be as many such slices, and this share of all.
+QUIET_EVENTS, LEAST_QUIET, QUIET_SHARE = 1, 4, 0.25
 
 
 def find_hot_pixels(events: EventSource) -> Quantity:
@@ -40,27 +43,45 @@ def find_hot_pixels(events: EventSource) -> Quantity:
     slices = int(np.clip(span // SHORT_SLICE_US, LEAST_SLICES, SLICES))
     length = min(SLICE_US, max(1, span // slices))
     starts = [events.first_us + (span - length) * k // (slices - 1) for k in range(slices)]
-    total = np.zeros((height, width), np.int64)
-    fired = np.zeros((height, width), np.int64)
+    whole, quiet = _Tally((height, width)), _Tally((height, width))
     looked, read = 0, 0
     for start in starts:
         seen = events.between(start, start + length)
         counts = event_counts(seen.x, seen.y, seen.polarity, (height, width)).sum(axis=0)
-        total += counts
-        fired += counts > 0
+        around = _busy_neighbour(counts)
+        whole.add(counts, around, np.ones(counts.shape, bool))
+        quiet.add(counts, around, around <= QUIET_EVENTS)
         looked, read = looked + 1, read + len(seen)
         if read > MOST_EVENTS:
             break
-    seconds = looked * length / 1e6
-    hot: NDArray[np.bool_] = (
-        (total > TIMES_NEIGHBOURS * np.maximum(_busy_neighbour(total), 1))
-        & (total > LEAST_RATE_HZ * seconds)
-        & (fired >= LEAST_SHARE * looked)
-    )
+    enough = quiet.slices >= max(LEAST_QUIET, QUIET_SHARE * looked)
+    # over the whole recording the busiest neighbour of all counts, not that of each slice
+    hot = whole.outdoes(_busy_neighbour(whole.total), length) | (enough & quiet.outdoes(quiet.around, length))
     rows, columns = np.nonzero(hot)
     found = [[int(x), int(y)] for x, y in zip(columns, rows, strict=True)]
     evidence = f"{looked} slices of {length / 1000:.1f} ms; {len(found)} of {width * height} pixels"
     return Quantity(found, None, "rate against the neighbours, slice by slice", evidence)
+
+
+class _Tally:
+    """What each pixel did in some of the slices, and its busy neighbours in the same."""
+
+    def __init__(self, shape: tuple[int, int]) -> None:
+        self.total, self.around, self.fired, self.slices = (np.zeros(shape, np.int64) for _ in range(4))
+
+    def add(self, counts: NDArray[np.int64], around: NDArray[np.int64], counted: NDArray[np.bool_]) -> None:
+        self.total += counts * counted
+        self.around += around * counted
+        self.fired += (counts > 0) & counted
+        self.slices += counted
+
+    def outdoes(self, around: NDArray[np.int64], length_us: int) -> NDArray[np.bool_]:
+        """Whether a pixel fires far more than these neighbours, and nearly always."""
+        return np.asarray(
+            (self.total > TIMES_NEIGHBOURS * np.maximum(around, 1))
+            & (self.total > LEAST_RATE_HZ * self.slices * length_us / 1e6)
+            & (self.fired >= LEAST_SHARE * self.slices)
+        )
 
 
 def _busy_neighbour(total: NDArray[np.int64]) -> NDArray[np.int64]:

@@ -54,6 +54,16 @@ def test_simulated_hot_pixels_are_found_beside_moving_parts():
     assert sorted(found) == sorted(simulated.hot.tolist())
 
 
+def test_a_hot_pixel_is_found_where_the_scene_is_busy_now_and_then():
+    # in half of the slices an edge passes and every pixel fires as often as the hot one
+    t, x, y = train(everywhere(), 300.0, 500_000)
+    passing = (t + 50_000 * (t // 50_000), x, y)
+    hot = [[20, 13], [40, 30]]
+    still = train(everywhere(), 1.0, 1_000_000, seed=2)
+    assert find_hot_pixels(source(passing, still)).value == []
+    assert sorted(find_hot_pixels(source(passing, still, train(hot, 300.0, 1_000_000, seed=8))).value) == hot
+
+
 @pytest.mark.parametrize("kind", ["texture", "fan", "text"])
 def test_moving_edges_are_not_taken_for_hot(kind):
     scene = make_scene(kind, SIZE, np.random.default_rng(6), 500.0)
