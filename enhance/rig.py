@@ -84,6 +84,8 @@ class Rig:
 class RiggedEvents:
     """Events as the frames see them: in the frame clock, on the frame's pixels, bad pixels dropped.
 
+    In a bad pixel's place stand the events of the pixel beside it: without any it would miss all that moves there.
+
     Parameters
     ----------
     source : EventSource
@@ -117,6 +119,7 @@ class RiggedEvents:
         if len(hot):
             columns, rows = np.asarray(hot, dtype=np.int64).T
             self._bad[rows, columns] = True
+        self._beside = _lent(self._bad)
         self.count = source.count
         self.notes = source.notes
         self.first_us, self.last_us, self.cover_start_us, self.cover_end_us = (
@@ -132,8 +135,9 @@ class RiggedEvents:
         x0, y0 = self._origin
         width, height = self.size
         # uint16 wraps below the crop's corner to large numbers, which the upper bound then rejects
+        events = _with_lent(events.keep(~self._bad[events.y, events.x]), self._beside)
         x, y = events.x - np.uint16(x0), events.y - np.uint16(y0)
-        inside = (x < width) & (y < height) & ~self._bad[events.y, events.x]
+        inside = (x < width) & (y < height)
         moved = Events(self._clock.to_frame(events.t_us), x, y, events.polarity)
         return moved if inside.all() else moved.keep(inside)
 
@@ -148,3 +152,30 @@ class RiggedEvents:
     def close(self) -> None:
         """Release the file."""
         self._source.close()
+
+
+def _lent(bad: NDArray[np.bool_]) -> NDArray[np.int64] | None:
+    """For each pixel, the bad one beside it that its events stand in for, counted row by row; -1 for none."""
+    if not bad.any():
+        return None
+    height, width = bad.shape
+    lent = np.full(bad.shape, -1, np.int64)
+    for row, column in np.argwhere(bad):
+        for y, x in ((row, column + 1), (row, column - 1), (row + 1, column), (row - 1, column)):
+            if 0 <= y < height and 0 <= x < width and not bad[y, x] and lent[y, x] < 0:
+                lent[y, x] = row * width + column
+                break
+    return lent
+
+
+def _with_lent(events: Events, lent: NDArray[np.int64] | None) -> Events:
+    """Let events stand a second time, right behind themselves, at the pixel they are lent to."""
+    if lent is None:
+        return events
+    to = lent[events.y, events.x]
+    times = 1 + (to >= 0)
+    order = np.repeat(np.arange(len(events)), times)
+    second = np.cumsum(times)[to >= 0] - 1
+    x, y = events.x[order], events.y[order]
+    y[second], x[second] = np.divmod(to[to >= 0], lent.shape[1])
+    return Events(events.t_us[order], x, y, events.polarity[order])

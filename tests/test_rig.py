@@ -94,13 +94,25 @@ def test_events_outside_a_smaller_frame_are_dropped():
     assert seen.x.max() == 5
 
 
-def test_hot_pixels_are_sensor_pixels_and_are_dropped_before_the_crop():
-    hot = [(3, 2), (11, 9), (7, 5)]
-    plain = RiggedEvents(everywhere(), rig(), (5, 4), (3, 2), (WIDTH, HEIGHT))
-    clean = RiggedEvents(everywhere(), rig(hot=hot), (5, 4), (3, 2), (WIDTH, HEIGHT))
-    seen, kept = (set(zip(e.x.tolist(), e.y.tolist(), strict=True)) for e in (all_of(plain), all_of(clean)))
-    assert seen - kept == {(0, 0), (4, 3)}
-    assert kept < seen
+def test_hot_pixels_are_sensor_pixels_and_show_what_the_pixel_beside_them_saw():
+    # (3, 2) is the crop's corner, (11, 9) beyond it; (7, 5) stands at its right border, and (8, 5) outside is hot too
+    hot = [(3, 2), (11, 9), (7, 5), (8, 5)]
+    plain, clean = (
+        all_of(RiggedEvents(everywhere(), r, (5, 4), (3, 2), (WIDTH, HEIGHT))) for r in (rig(), rig(hot=hot))
+    )
+    seen, kept = (
+        {(x, y): (t, p) for t, x, y, p in zip(*(c.tolist() for c in (e.t_us, e.x, e.y, e.polarity)), strict=True)}
+        for e in (plain, clean)
+    )
+    assert kept == seen | {(0, 0): seen[1, 0], (4, 3): seen[3, 3]}
+    assert (np.diff(clean.t_us) >= 0).all()
+
+
+def test_a_pixel_stands_in_for_one_hot_pixel_at_the_most_and_a_lone_one_stays_empty():
+    # the whole sensor is hot but for one pixel
+    hot = [(x, y) for y in range(HEIGHT) for x in range(WIDTH) if (x, y) != (5, 5)]
+    seen = all_of(RiggedEvents(everywhere(), rig(hot=hot), (WIDTH, HEIGHT)))
+    assert sorted(zip(seen.x.tolist(), seen.y.tolist(), strict=True)) == [(5, 4), (5, 5)]
 
 
 def test_noise_of_the_frames_is_floor_and_shot_in_quadrature():
