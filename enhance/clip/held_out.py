@@ -10,6 +10,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from enhance.clip.pictures import Pictures
+from enhance.kernels.optical_flow import flow_between
 from enhance.light import Image, Light
 from enhance.measure import (
     alternatives,
@@ -22,7 +23,7 @@ from enhance.measure import (
     sharpness,
     ssim,
 )
-from enhance.recording import Picture
+from enhance.recording import Frame, Picture
 
 #: Moving pixels: around any event from this long before a span to this long after it, microseconds.
 BEFORE_US, AFTER_US = 10_000, 20_000
@@ -77,13 +78,13 @@ def judge(pictures: Pictures, index: int) -> Judged:
     held = keys.frames.frame(index)
     key = max(k for k, i in enumerate(keys.indices) if i < index)
     left, right = (keys.frames.frame(keys.indices[k]).image for k in (key, key + 1))
-    times = _instants(pictures, key, held.start_us, held.end_us)
+    sharp = pictures.at(held.time_us)
+    times = _instants(pictures, key, held, sharp.image)
     made = re_expose(pictures.at(t).image for t in times)
     moving = _moving(pictures, key)
     plain = alternatives(left, right, keys.times_us[key], keys.times_us[key + 1], held.time_us)
     reference = light.to_codes(held.image)
     compare = _comparison(reference, light, moving)
-    sharp = pictures.at(held.time_us)
     figures: dict[str, Any] = {"time_us": held.time_us}
     figures["psnr"], figures["psnr_moving"] = compare(made)
     codes = _codes(made, light)
@@ -101,13 +102,23 @@ def judge(pictures: Pictures, index: int) -> Judged:
     return Judged(sharp, figures)
 
 
-def _instants(pictures: Pictures, key: int, start_us: int, end_us: int) -> list[int]:
-    """As many instants as keep the motion within half a pixel a step."""
-    times = pictures.keys.times_us
-    if not pictures.keys.span_covered(key):
-        return exposure_times(start_us, end_us, 0.0)
-    motion = pictures.span(key).motion_px * (end_us - start_us) / (times[key + 1] - times[key])
-    return exposure_times(start_us, end_us, min(motion, MOST_EXPOSED / 2))
+def _instants(pictures: Pictures, key: int, held: Frame, middle: Image) -> list[int]:
+    """As many instants as keep the motion within half a pixel a step.
+
+    The motion is that between pictures made within the exposure: the keys lie too far apart for the frames' own flow.
+    """
+    if not pictures.keys.span_covered(key) or held.exposure_us == 0:
+        return exposure_times(held.start_us, held.end_us, 0.0)
+    first, last = pictures.keys.times_us[key : key + 2]
+    ends = [pictures.at(t).image for t in (max(held.start_us, first), min(held.end_us, last))]
+    motion = sum(_motion_px(end, middle) for end in ends)
+    return exposure_times(held.start_us, held.end_us, min(motion, MOST_EXPOSED / 2))
+
+
+def _motion_px(one: Image, two: Image) -> float:
+    """How far the fastest parts move from one picture to another (99th percentile), pixels."""
+    flow = flow_between(one, two)
+    return float(np.percentile(np.hypot(flow[..., 0], flow[..., 1]), 99))
 
 
 def _moving(pictures: Pictures, key: int) -> NDArray[np.bool_] | None:

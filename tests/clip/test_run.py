@@ -14,7 +14,16 @@ import pytest
 
 from enhance import clip
 from enhance.errors import CalibrationError, ModelError
-from enhance.settings import ClipSettings, RigSettings, SlowMotionSettings, Window
+from enhance.settings import (
+    ClipSettings,
+    EventsSettings,
+    FramesSettings,
+    OutputSettings,
+    RigSettings,
+    SlowMotionSettings,
+    Window,
+)
+from enhance.simulate import Camera, EventSensor, make_scene, simulate, write_recording
 
 
 def run(settings: ClipSettings) -> clip.ClipResult:
@@ -93,6 +102,26 @@ def test_held_out_figures_are_those_of_the_pictures(settings: ClipSettings, simu
     assert abs(summary["figures"]["psnr_moving"]["mean"] - mean) < 1e-3
     assert all(figure["definition"] for figure in summary["figures"].values())
     assert result.figures["held_out"]["pictures"] == len(table)
+
+
+def test_fast_motion_is_re_exposed_in_steps_of_half_a_pixel(tmp_path: Path) -> None:
+    # 600 px/s for 20 ms: 12 px in an exposure, 24 instants; the keys stand 48 px apart, where no flow finds the way
+    scene = make_scene("text", (112, 96), np.random.default_rng(77), 600.0)
+    recorded = simulate(scene, Camera(rate_hz=25.0, exposure_us=20_000), EventSensor(0.2, 0.2), 0.14, 77)
+    write_recording(recorded, tmp_path)
+    run(
+        ClipSettings(
+            "Fast",
+            FramesSettings(tmp_path / "frames", tmp_path / "frames.csv", light_curve="linear"),
+            EventsSettings(tmp_path / "events.h5", size=(112, 96), cover_us=(0, 140_000)),
+            OutputSettings(tmp_path / "out", stills="none", video="none"),
+            rig=RigSettings(contrast=(0.2, 0.2), offset_us=0, drift_ppm=0.0),
+            network="off",
+            hold_out=2,
+        )
+    )
+    (row,) = rows(tmp_path / "out" / "held-out.csv")
+    assert 17 <= int(row["re_exposed"]) <= 32
 
 
 def test_second_pass_never_sees_a_held_out_frame(settings: ClipSettings, folder: Path, tmp_path: Path) -> None:
