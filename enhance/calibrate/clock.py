@@ -35,6 +35,10 @@ LEAST_CORRELATION = 0.25
 OPPOSITE = 1.5
 #: A periodic scene fits at several offsets: those within this part of the best one count as equal.
 EQUAL_PEAK = 0.03
+#: Length of the search's ramps in those of the pictures. Measured on six simulated recordings: the offset comes out 0.14
+#: to 0.49 ms low with 1, within 0.21 ms with 5. Presumably because a short ramp, always before its event, is late where
+#: light turns, while one that reaches from event to event is nearly the same forwards and backwards in time.
+RAMPS = 5
 METHOD = "correlation of frame change and double integral"
 #: Steps whose events are read at a time in the coarse search: memory follows this, not the search range.
 PIECE_BINS = 50
@@ -179,7 +183,8 @@ def refine_offset(
 ) -> tuple[int, float | None, float]:
     """Maximise the double integral's own correlation around a first offset.
 
-    A staircase is late by part of a threshold, which looks like a clock offset: the ramp must be set before.
+    A staircase is late by part of a threshold, which looks like a clock offset: the ramp must be set before, and is
+    taken `RAMPS` times as long here.
 
     Parameters
     ----------
@@ -197,6 +202,7 @@ def refine_offset(
         Scatter over the pairs (jackknife).
     correlation : float
     """
+    contrast = replace(contrast, ramp_us=RAMPS * contrast.ramp_us)
     for step in (1_000, 250, 60):
         if step > reach:
             continue
