@@ -35,9 +35,9 @@ LEAST_CORRELATION = 0.25
 OPPOSITE = 1.5
 #: A periodic scene fits at several offsets: those within this part of the best one count as equal.
 EQUAL_PEAK = 0.03
-#: Length of the search's ramps in those of the pictures. Measured on six simulated recordings: the offset comes out 0.14
-#: to 0.49 ms low with 1, within 0.21 ms with 5. Presumably because a short ramp, always before its event, is late where
-#: light turns, while one that reaches from event to event is nearly the same forwards and backwards in time.
+#: Length of the search's ramps in those of the pictures. Measured on six simulated recordings: the offset comes out
+#: 0.14 to 0.49 ms low with 1, within 0.21 ms with 5. Presumably because a short ramp, always before its event, is late
+#: where light turns, while one that reaches from event to event is nearly the same forwards and backwards in time.
 RAMPS = 5
 METHOD = "correlation of frame change and double integral"
 #: Steps whose events are read at a time in the coarse search: memory follows this, not the search range.
