@@ -10,7 +10,7 @@ import numpy as np
 from enhance.calibrate import known_rig
 from enhance.clip.keys import SLACK
 from enhance.clip.plan import make_plan
-from enhance.clip.source import events_on_frames, opened
+from enhance.clip.source import events_on_frames, light_remarks, opened
 from enhance.errors import EnhanceError, JobError
 from enhance.recording import Recording
 from enhance.rig import Rig
@@ -75,9 +75,11 @@ def _look(recording: Recording, settings: ClipSettings) -> Findings:
     times = [int(t) for t in (frames.start_us + frames.end_us) // 2]
     plan = make_plan(settings, times)
     mistakes, warnings = _overlap(recording, rig)
-    warnings += [*frames.notes, *recording.events.notes, *plan.remarks]
+    warnings += [*frames.notes, *light_remarks(frames), *recording.events.notes, *plan.remarks]
     if len(frames) == 1:
         warnings.append("one frame only: no clip is made")
+    if settings.slow_motion is None and not settings.output.times_us and settings.output.stills == "none":
+        warnings.append("no clip ([slow_motion] is left out) and no stills are asked for: only the tables are made")
     if settings.hold_out >= len(frames):
         warnings.append(f"measure.hold_out = {settings.hold_out} leaves no frame between keys: no figures are made")
     if settings.network != "off" and not mistakes:

@@ -19,7 +19,7 @@ from enhance.clip.outputs import Outputs
 from enhance.clip.pictures import Pictures
 from enhance.clip.plan import Plan, make_plan
 from enhance.clip.quality import held_out_summary, sharpness_summary
-from enhance.clip.source import events_on_frames, opened
+from enhance.clip.source import events_on_frames, light_remarks, opened
 from enhance.errors import CalibrationError
 from enhance.measure import sharpness
 from enhance.recording import By, Kind, Recording
@@ -253,7 +253,7 @@ def _judge_all(
 
 
 def _notes(recording: Recording, rig: Rig, plan: Plan, counts: Counter[str]) -> tuple[str, ...]:
-    notes = [*recording.frames.notes, *recording.events.notes, *plan.remarks]
+    notes = [*recording.frames.notes, *light_remarks(recording.frames), *recording.events.notes, *plan.remarks]
     if rig.offset_us.value is None:
         notes.append(f"the clock of the events cannot be told ({rig.offset_us.evidence}): every picture is from frames")
     elif counts[Kind.CAPTURED]:

@@ -154,4 +154,4 @@ def _remarks(times_us: Sequence[int], usual: int) -> tuple[str, ...]:
         return ()
     where = ", ".join(f"{at / 1e6:.3f} s ({length / usual:.1f} times the usual)" for at, length in long[:5])
     more = f" and {len(long) - 5} more" if len(long) > 5 else ""
-    return (f"{len(long)} spans over dropped frames keep their scene speed: at {where}{more}",)
+    return (f"spans over dropped frames, which keep their scene speed: {len(long)}, at {where}{more}",)

@@ -5,10 +5,15 @@ from __future__ import annotations
 from collections.abc import Iterator
 from contextlib import contextmanager
 
+import numpy as np
+
 from enhance.read import open_events, open_frames
-from enhance.recording import Recording
+from enhance.recording import FrameSource, Recording
 from enhance.rig import Rig, RiggedEvents
 from enhance.settings import ClipSettings
+
+#: Frames looked at, light outside 0 to 1 that is more than noise, and the share of such pixels that is no accident.
+LOOKED_AT, OUTSIDE, STRANGE_SHARE = 5, 0.05, 0.01
 
 
 @contextmanager
@@ -49,3 +54,31 @@ def events_on_frames(recording: Recording, rig: Rig) -> RiggedEvents | None:
     return RiggedEvents(
         recording.events, rig, (width, height), recording.frames.crop_origin, recording.frames.full_size
     )
+
+
+def light_remarks(frames: FrameSource) -> tuple[str, ...]:
+    """Say where `frames.white` or `frames.black` cannot be right: codes far outside them in some of the frames.
+
+    Parameters
+    ----------
+    frames : FrameSource
+
+    Returns
+    -------
+    tuple of str
+    """
+    some = np.unique(np.linspace(0, len(frames) - 1, min(len(frames), LOOKED_AT)).round().astype(int))
+    images = [frames.frame(int(index)).image for index in some]
+    over = float(np.mean([np.mean(image > 1 + OUTSIDE) for image in images]))
+    under = float(np.mean([np.mean(image < -OUTSIDE) for image in images]))
+    remarks = []
+    if over > STRANGE_SHARE:
+        remarks.append(
+            f"{over:.1%} of the pixels lie above frames.white = {frames.light.white:g}; they count as clipped. "
+            f"Check frames.white: full scale of these codes (4095 for 12 bit, 65535 for 16 bit)"
+        )
+    if under > STRANGE_SHARE:
+        remarks.append(
+            f"{under:.1%} of the pixels lie far below frames.black = {frames.light.black:g}; check frames.black"
+        )
+    return tuple(remarks)

@@ -304,3 +304,10 @@ def test_preview_shows_a_key_an_inserted_picture_and_the_events(settings: ClipSe
     blue, _, red = np.moveaxis(codes(made[0]), -1, 0)
     assert ((red > 250) & (blue < 50)).sum() > 20
     assert ((blue > 250) & (red < 50)).sum() > 20
+
+
+def test_a_white_far_too_low_is_told(settings: ClipSettings) -> None:
+    wrong = replace(settings, frames=replace(settings.frames, white=60.0))
+    assert any("lie above frames.white = 60" in note for note in run(wrong).notes)
+    assert any("lie above frames.white = 60" in warning for warning in clip.check(wrong).warnings)
+    assert not any("frames.white" in warning for warning in clip.check(settings).warnings)
