@@ -13,6 +13,7 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 
+import cv2
 import numpy as np
 from numpy.typing import NDArray
 
@@ -24,6 +25,9 @@ Array = NDArray[np.float64]
 
 #: Relative error of a pixel's threshold: mismatch between pixels (2 to 4 %, common practice) and of the estimate.
 MISMATCH = 0.05
+#: Variance that a step leaves open in a log ratio, in squared thresholds, and the neighbourhood it is judged over. On
+#: simulated recordings 1/48 to 1/12 gain 0 to 1.7 dB, most in slow scenes; more takes sharpness from fast ones.
+DAMPING, DAMPING_PIXELS = 1 / 48, 5
 
 
 @dataclass(frozen=True)
@@ -64,7 +68,7 @@ def own_evidence(
     """
     shape = log_image.shape
     start, end = interval_us
-    value = log_image - log_blur_ratio(events, start, end, time_us, contrast, shape)
+    value = log_image - damped(log_blur_ratio(events, start, end, time_us, contrast, shape), contrast.mean)
     if end <= start:
         return Evidence(value, 1.0 / noise**2)
     seen = events.between(start, end)
@@ -72,6 +76,31 @@ def own_evidence(
     c = contrast.mean
     variance = noise**2 + np.where(steps > 0, c**2 / 48, 0.0) + (MISMATCH * c) ** 2 * steps
     return Evidence(value, 1.0 / variance)
+
+
+def damped(ratio: Array, contrast: float) -> Array:
+    """Take a log ratio back where it is no larger than what the events' steps leave open around it.
+
+    Slow and faint edges fire a single event here and there: corrected by them, a nearly sharp frame would get the steps
+    of the staircase stamped on it. Where blur is real, its ratios are large and near each other, and stay.
+
+    Parameters
+    ----------
+    ratio : ndarray of float64, shape (H, W)
+        ln B - ln L.
+    contrast : float
+        Mean threshold.
+
+    Returns
+    -------
+    ndarray of float64, shape (H, W)
+
+    References
+    ----------
+    Wiener, "Extrapolation, Interpolation, and Smoothing of Stationary Time Series", 1949: signal / (signal + noise).
+    """
+    signal = cv2.GaussianBlur(ratio**2, (DAMPING_PIXELS, DAMPING_PIXELS), 0)
+    return ratio * (signal / (signal + DAMPING * contrast**2))
 
 
 def change_evidence(
