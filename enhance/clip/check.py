@@ -16,11 +16,13 @@ from enhance.recording import Recording
 from enhance.rig import Rig
 from enhance.settings import ClipSettings
 
-#: Seconds for one pixel of one picture, as measured on two cores of a plain workstation (DEVELOPERS.md says how):
-#: a key, an inserted picture with the network and without it, one of the second pass's exposures; and for one event.
-KEY_S, FUSED_S, BLENDED_S, JUDGED_S, EVENT_S = 5e-7, 1.4e-6, 8e-7, 3e-6, 1e-7
-#: Pictures a held-out frame needs for its exposure, in the mean; and seconds a calibration takes.
-EXPOSED, CALIBRATION_S = 12, 15.0
+#: Seconds for one pixel of one picture, fitted to the demo and to a sparse real recording on two cores: a key, an
+#: inserted picture with the network and without it, and the comparison of a held-out frame.
+KEY_S, FUSED_S, BLENDED_S, JUDGED_S = 3e-7, 9e-7, 4e-7, 2.2e-6
+#: Pictures averaged for a held-out frame whose exposure is longer than `SHARP_US`, in the mean; else one.
+EXPOSED, SHARP_US = 20, 2_000
+#: Seconds of one calibration, and for each event between the pairs of keys it looks at.
+CALIBRATION_S, EVENT_S, PAIRS = 3.0, 2.3e-6, 13
 #: Bytes a pixel of a 16-bit still and of the clip.
 STILL_BYTES, CLIP_BYTES = 2.0, {"h264": 0.15, "ffv1": 1.5, "none": 0.0}
 
@@ -142,11 +144,13 @@ def _cost(recording: Recording, settings: ClipSettings, pictures: int) -> tuple[
     colours = frames.shape[2] if len(frames.shape) == 3 else 1
     keys = len(frames)
     each = BLENDED_S if settings.network == "off" else FUSED_S
-    seconds = pixels * (KEY_S * keys + each * max(pictures - keys, 0)) + CALIBRATION_S
-    seconds += EVENT_S * recording.events.count
+    looked_at = recording.events.count * min(1.0, PAIRS / max(keys - 1, 1))
+    calibration = CALIBRATION_S + EVENT_S * looked_at
+    seconds = calibration + pixels * (KEY_S * keys + each * max(pictures - keys, 0))
     if settings.hold_out:
         held = keys - len(range(0, keys, settings.hold_out))
-        seconds += held * pixels * (JUDGED_S + each * EXPOSED) + CALIBRATION_S
+        blurred = float(np.median(frames.end_us - frames.start_us)) > SHARP_US
+        seconds += calibration + held * pixels * (JUDGED_S + each * (EXPOSED if blurred else 1))
     stills = {"none": 0, "deblurred": min(keys, pictures), "all": pictures}[settings.output.stills]
     per_pixel = colours * (stills * STILL_BYTES + pictures * CLIP_BYTES[settings.output.video])
     return seconds, int(pixels * per_pixel) + 1_000_000
