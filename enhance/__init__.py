@@ -11,9 +11,9 @@ The map, in the order of the flow::
     simulate     scene, frame camera, event sensor: recordings whose truth is known
     train        fits the fusion network
     batch        many jobs: job file, checks, outcome
+    clip         one recording through the rooms: the only part that knows their order
     kernels      compiled loops: event sums, the double integral, resampling
 
-    clip.py       one recording through the rooms: the only file that knows their order
     recording.py  what flows: frames, events, a recording, a picture
     rig.py        how the two sensors relate
     settings.py   what a job asks for

@@ -11,6 +11,7 @@ IEC 61966-2-1 (sRGB); Recommendation ITU-R BT.709 (with the standard's rounded c
 from __future__ import annotations
 
 import re
+from collections.abc import Callable
 from dataclasses import dataclass
 
 import numpy as np
@@ -108,12 +109,12 @@ def log_light(linear: Image) -> Image:
     return np.log(np.maximum(linear, 0) + LOG_FLOOR)
 
 
-def _odd(function: object, curve: str, value: Image) -> Image:
+def _odd(function: Callable[[str, Image], Image], curve: str, value: Image) -> Image:
     """Apply a curve to the magnitude and give the sign back: read noise around black must not turn into a bias."""
     if curve == "linear":
         return value
     size = np.abs(value)
-    return np.copysign(function(curve, size), value).astype(np.float32)  # type: ignore[operator]
+    return np.copysign(function(curve, size), value).astype(np.float32)
 
 
 def _decode(curve: str, signal: Image) -> Image:

@@ -17,8 +17,7 @@ from enhance.kernels.event_intervals import burst_intervals
 from enhance.recording import EventSource
 from enhance.rig import Quantity
 
-#: Ramp in median intervals: measured on simulated recordings, where keys deblurred with 1.5 to 3 of them are within
-#: 0.3 dB of the best.
+#: Ramp in median intervals: on 17 simulated recordings the best lay at 1 to 4 of them, at about 2 in most.
 INTERVALS = 2.0
 #: A ramp over this part of the exposure cannot be told from a clock offset: there the offset takes up both.
 LONGEST_SHARE = 0.5

@@ -11,6 +11,7 @@ from enhance.calibrate import known_rig
 from enhance.clip.keys import SLACK
 from enhance.clip.plan import make_plan
 from enhance.clip.source import events_on_frames, light_remarks, opened
+from enhance.clock import middle_us
 from enhance.errors import EnhanceError, JobError
 from enhance.recording import Recording
 from enhance.rig import Rig
@@ -74,7 +75,7 @@ def check(settings: ClipSettings) -> Findings:
 def _look(recording: Recording, settings: ClipSettings) -> Findings:
     frames = recording.frames
     rig = known_rig(recording, settings.rig)
-    times = [int(t) for t in (frames.start_us + frames.end_us) // 2]
+    times = [middle_us(start, end) for start, end in zip(frames.start_us, frames.end_us, strict=True)]
     plan = make_plan(settings, times)
     mistakes, warnings = _overlap(recording, rig)
     warnings += [*frames.notes, *light_remarks(frames), *recording.events.notes, *plan.remarks]

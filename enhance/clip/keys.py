@@ -9,6 +9,7 @@ from typing import TypeVar
 
 import numpy as np
 
+from enhance.clock import middle_us
 from enhance.deblur import WINDOW, Evidence, change_evidence, couple, own_evidence
 from enhance.light import LOG_FLOOR, log_light, luma
 from enhance.recording import By, Events, Frame, FrameSource, Kind, Picture
@@ -143,7 +144,7 @@ def _captured(frame: Frame, noise: np.ndarray) -> Evidence:
 
 
 def _time(frames: FrameSource, index: int) -> int:
-    return (int(frames.start_us[index]) + int(frames.end_us[index])) // 2
+    return middle_us(int(frames.start_us[index]), int(frames.end_us[index]))
 
 
 def remember(store: OrderedDict[int, T], key: int, make: Callable[[], T], most: int) -> T:

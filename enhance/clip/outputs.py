@@ -10,6 +10,7 @@ from typing import Any
 
 from enhance.clip.held_out import COLUMNS, Judged
 from enhance.clip.plan import Plan, Planned
+from enhance.clock import middle_us
 from enhance.light import Light
 from enhance.recording import FrameSource, Kind, Picture
 from enhance.settings import ClipSettings
@@ -35,7 +36,7 @@ class Outputs:
         self.folder = settings.output.folder
         self.files: list[str] = []
         self._settings, self._light, self._plan = settings, frames.light, plan
-        self._first_us = (int(frames.start_us[0]) + int(frames.end_us[0])) // 2
+        self._first_us = middle_us(int(frames.start_us[0]), int(frames.end_us[0]))
         self._rows: list[tuple[Any, ...]] = []
         self._asked = {self._first_us + t for t in settings.output.times_us}
         self._stack = ExitStack()

@@ -96,11 +96,6 @@ class Span:
         start, end = self.interval_us
         return (time_us - start) / (end - start)
 
-    @property
-    def motion_px(self) -> float:
-        """How far the fastest parts move over the whole span, by the frames' own flow (99th percentile), pixels."""
-        return max(float(np.percentile(np.hypot(flow[..., 0], flow[..., 1]), 99)) for flow in self._straight)
-
     def at(self, time_us: int) -> Candidates:
         """Make all candidates of one instant.
 
