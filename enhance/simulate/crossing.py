@@ -6,7 +6,7 @@ import numba
 import numpy as np
 from numpy.typing import NDArray
 
-#: Events one call may write, and room left for one pixel within one step (log light spans under 7, thresholds exceed
+#: Events one call may write, and room left for one pixel within one step (log light spans under 8, thresholds exceed
 #: 0.005, so no step holds more crossings than this).
 CAPACITY, MOST_A_PIXEL = 1 << 18, 1 << 12
 

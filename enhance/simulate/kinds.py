@@ -12,6 +12,7 @@ from enhance.simulate.label import label_line
 from enhance.simulate.motion import Fall, Motion
 from enhance.simulate.scene import Cloth, Layer, LayeredScene, Part, Still, Surface
 from enhance.simulate.texture import make_texture
+from enhance.simulate.veil import Sheet, dye, highlight, pane
 
 Size = tuple[int, int]
 Rng = np.random.Generator
@@ -74,6 +75,12 @@ def _surface(size: Size, rng: Rng, color: bool, textures: str, motion: Motion, r
 def _backdrop(size: Size, rng: Rng, color: bool, textures: str) -> Still:
     shift = tuple(rng.uniform(0, 4 * max(size), 2))
     return _surface(size, rng, color, textures, Motion(origin=shift, angle=rng.uniform(0, 0.3))).still(size)
+
+
+def _out_of_focus(backdrop: Still, size: Size) -> Still:
+    """Blur a background as it is where drops and smoke are filmed: far behind them."""
+    soft = cv2.GaussianBlur(backdrop.image, (0, 0), 0.06 * max(size)).reshape(backdrop.image.shape)
+    return Still(np.asarray(soft, dtype=np.float32))
 
 
 def _curve(size: Size, rng: Rng, speed: float, heading: float) -> Motion:
@@ -147,11 +154,7 @@ def _fan(size: Size, rng: Rng, speed: float, color: bool, textures: str) -> list
 def _drops(size: Size, rng: Rng, speed: float, color: bool, textures: str) -> list[Layer]:
     """Make small round drops that fall and speed up over a soft background."""
     backdrop = _backdrop(size, rng, color, textures)
-    if rng.random() < 0.6:
-        # as drops are filmed: what lies behind is far out of focus
-        soft = cv2.GaussianBlur(backdrop.image, (0, 0), 0.06 * max(size)).reshape(backdrop.image.shape)
-        backdrop = Still(np.asarray(soft, dtype=np.float32))
-    layers: list[Layer] = [backdrop]
+    layers: list[Layer] = [_out_of_focus(backdrop, size) if rng.random() < 0.6 else backdrop]
     height = size[1]
     for _ in range(int(rng.integers(30, 70))):
         radius = rng.uniform(1.6, 0.02 * height + 3.0)
@@ -221,6 +224,40 @@ def _text(size: Size, rng: Rng, speed: float, color: bool, textures: str) -> lis
     return [_surface(size, rng, color, textures, _curve(size, rng, speed, heading), "glyphs")]
 
 
+def _fluid(size: Size, rng: Rng, speed: float, color: bool, textures: str) -> list[Layer]:
+    """Make dye or smoke that a stirred flow carries over a background at rest."""
+    backdrop = _backdrop(size, rng, color, textures)
+    behind = _out_of_focus(backdrop, size) if rng.random() < 0.4 else backdrop
+    return [behind, dye(size, _side(size), rng, speed, behind.image)]
+
+
+def _glass(size: Size, rng: Rng, speed: float, color: bool, textures: str) -> list[Layer]:
+    """Make a surface seen through a moving textured pane, on which highlights glide."""
+    own = speed * rng.uniform(0.1, 0.9) * (rng.random() < 0.7)
+    behind = _surface(size, rng, color, textures, _curve(size, rng, own, rng.uniform(0, 2 * np.pi)))
+    front = _curve(size, rng, speed, rng.uniform(0, 2 * np.pi))
+    layers: list[Layer] = [behind, Sheet(pane(_side(size), rng, textures, color), front)]
+    for _ in range(int(rng.integers(3, 9))):
+        radius = rng.uniform(2.0, 8.0)
+        motion = _to_and_fro(size, rng, speed * rng.uniform(0.2, 1.0), radius)
+        layers.append(Part(highlight(radius, rng, color), motion, radius))
+    return layers
+
+
+def _specks(size: Size, rng: Rng, speed: float, color: bool, textures: str) -> list[Layer]:
+    """Make many small textured things, each with its own speed and heading, over a textured background at rest."""
+    layers: list[Layer] = [_backdrop(size, rng, color, textures)]
+    sheet = make_texture(1024, rng, textures, color)
+    for index in range(int(rng.integers(20, 50))):
+        # 3 to 12 pixels across
+        radius = rng.uniform(1.5, 6.0)
+        corner = rng.integers(0, sheet.shape[0] - 64, 2)
+        surface = sheet[corner[0] : corner[0] + 64, corner[1] : corner[1] + 64] * np.float32(rng.uniform(0.3, 2.0))
+        own = speed * (1.0 if index == 0 else rng.uniform(0.2, 1.0))
+        layers.append(Part(polygon(radius, rng, surface), _to_and_fro(size, rng, own, radius), radius))
+    return layers
+
+
 Builder = Callable[[Size, Rng, float, bool, str], list[Layer]]
 
 _BUILDERS: dict[str, Builder] = {
@@ -232,6 +269,9 @@ _BUILDERS: dict[str, Builder] = {
     "zoom": _zoom,
     "cloth": _cloth,
     "text": _text,
+    "fluid": _fluid,
+    "glass": _glass,
+    "specks": _specks,
 }
 
 #: Every kind of scene.

@@ -56,8 +56,11 @@ class Simulated:
     duration_us: int
 
     def truth(self, t_us: float) -> Image:
-        """Sharp, noise-free linear image at a time of the frame clock, under steady light; (H, W) or (H, W, 3)."""
-        return self.scene.render(t_us * 1e-6)
+        """Sharp, noise-free linear image at a time of the frame clock, under steady light; (H, W) or (H, W, 3).
+
+        As a frame could show it: highlights end at full scale, 1.
+        """
+        return np.minimum(self.scene.render(t_us * 1e-6), np.float32(1.0))
 
 
 def simulate(

@@ -15,6 +15,10 @@ from enhance.light import Image
 #: Texels a frame pixel, along each axis.
 OVERSAMPLE = 2
 
+#: One turn of a sine, its start again at the end: between its entries a line is right to 3e-7, at a third of the time.
+_TURN = 4096
+_SINE = np.sin(np.arange(_TURN + 1) * (2 * np.pi / _TURN))
+
 
 @numba.njit(cache=True, nogil=True)
 def paint_texture(out: Image, texture: Image, matrix: NDArray[np.float64]) -> None:
@@ -117,3 +121,92 @@ def paint_part(out: Image, part: Image, matrix: NDArray[np.float64], box: tuple[
                     + w11 * part[j + 1, i + 1, c]
                 )
                 out[y, x, c] = out[y, x, c] * (np.float32(1) - cover) + light
+
+
+@numba.njit(cache=True, nogil=True)
+def paint_sheet(out: Image, sheet: Image, matrix: NDArray[np.float64]) -> None:
+    """Lay a half-transparent sheet that repeats without end over a frame.
+
+    Parameters
+    ----------
+    out : ndarray of float32, shape (H, W, C)
+        Changed.
+    sheet : ndarray of float32, shape (S, S, C + 1)
+        Light already multiplied by coverage, then coverage (0 to 1); S a power of two.
+    matrix : ndarray of float64, shape (2, 3)
+        Frame pixel (x, y, 1) to texel (u, v).
+    """
+    height, width, channels = out.shape
+    mask = sheet.shape[0] - 1
+    one = np.float32(1)
+    for y in range(height):
+        for x in range(width):
+            u = matrix[0, 0] * x + matrix[0, 1] * y + matrix[0, 2]
+            v = matrix[1, 0] * x + matrix[1, 1] * y + matrix[1, 2]
+            left, top = int(np.floor(u)), int(np.floor(v))
+            fu, fv = np.float32(u - left), np.float32(v - top)
+            i0, i1, j0, j1 = left & mask, (left + 1) & mask, top & mask, (top + 1) & mask
+            w00, w01, w10, w11 = (one - fu) * (one - fv), fu * (one - fv), (one - fu) * fv, fu * fv
+            c = channels
+            through = one - (
+                w00 * sheet[j0, i0, c] + w01 * sheet[j0, i1, c] + w10 * sheet[j1, i0, c] + w11 * sheet[j1, i1, c]
+            )
+            for c in range(channels):
+                light = (
+                    w00 * sheet[j0, i0, c] + w01 * sheet[j0, i1, c] + w10 * sheet[j1, i0, c] + w11 * sheet[j1, i1, c]
+                )
+                out[y, x, c] = out[y, x, c] * through + light
+
+
+@numba.njit(cache=True, nogil=True)
+def paint_dye(
+    out: Image,
+    density: Image,
+    shears: NDArray[np.float64],
+    shift: NDArray[np.float64],
+    weights: Image,
+    tones: Image,
+) -> None:
+    """Lay dye or smoke over a frame, carried by a chain of shears.
+
+    Parameters
+    ----------
+    out : ndarray of float32, shape (H, W, C)
+        Changed.
+    density : ndarray of float32, shape (S, S, 2)
+        Two fields of coverage, 0 to 1, that repeat without end; S a power of two.
+    shears : ndarray of float64, shape (K, 5)
+        Direction (x, y) of each shift, radians a pixel across it, amplitude in pixels, phase in radians; the first is
+        the last to act on the dye, so the first to be undone.
+    shift : ndarray of float64, shape (2,)
+        How far the dye has drifted before the shears, pixels.
+    weights : ndarray of float32, shape (2,)
+        How much of either field there is; their sum is at most 1.
+    tones : ndarray of float32, shape (2, C)
+        Light of the thinnest and of the thickest dye.
+    """
+    height, width, channels = out.shape
+    mask = density.shape[0] - 1
+    for row in range(height):
+        for column in range(width):
+            x, y = float(column), float(row)
+            for k in range(shears.shape[0]):
+                # along (ex, ey), by a sine of what lies across it: undone exactly, since the shift leaves that alone
+                ex, ey = shears[k, 0], shears[k, 1]
+                place = (shears[k, 2] * (ex * y - ey * x) + shears[k, 4]) * (_TURN / (2 * np.pi))
+                entry = int(np.floor(place))
+                low, high = _SINE[entry & (_TURN - 1)], _SINE[(entry & (_TURN - 1)) + 1]
+                away = shears[k, 3] * (low + (place - entry) * (high - low))
+                x, y = x - away * ex, y - away * ey
+            u, v = OVERSAMPLE * (x - shift[0]), OVERSAMPLE * (y - shift[1])
+            left, top = int(np.floor(u)), int(np.floor(v))
+            fu, fv = np.float32(u - left), np.float32(v - top)
+            i0, i1, j0, j1 = left & mask, (left + 1) & mask, top & mask, (top + 1) & mask
+            cover = np.float32(0)
+            for c in range(2):
+                above = density[j0, i0, c] + fu * (density[j0, i1, c] - density[j0, i0, c])
+                below = density[j1, i0, c] + fu * (density[j1, i1, c] - density[j1, i0, c])
+                cover += weights[c] * (above + fv * (below - above))
+            for c in range(channels):
+                light = tones[0, c] + cover * (tones[1, c] - tones[0, c])
+                out[row, column, c] += cover * (light - out[row, column, c])

@@ -36,7 +36,10 @@ class Scene(Protocol):
         ...
 
     def render(self, t_s: float) -> Image:
-        """Draw the scene at `t_s` seconds: float32, (H, W) or (H, W, 3), linear radiance above 0 and up to 1."""
+        """Draw the scene at `t_s` seconds: float32, (H, W) or (H, W, 3), linear radiance above 0.
+
+        1 is the camera's full scale; highlights may lie above, where frames clip and the event sensor does not.
+        """
         ...
 
 

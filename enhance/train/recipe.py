@@ -18,13 +18,19 @@ Rng = np.random.Generator
 HELD_OUT_SEED = 900_000
 #: Share of recordings on which the event model itself is violated. Real sensors do it always, a simulator never does:
 #: without them the network would trust the events blindly.
-VIOLATED = 0.4
+VIOLATED = 0.45
 #: Share of recordings with a rig far off, as after a failed calibration.
 BADLY_RIGGED = 0.15
 #: Keys of a recording; their spans differ in what the multi-frame integral knows of them.
 KEYS = (5, 6)
 #: Most motion within one exposure, pixels.
-MOST_BLUR_PX = 25.0
+MOST_BLUR_PX = 30.0
+#: Share of recordings whose frames are practically sharp, and their exposure over the time between keys.
+SHARP, SHARP_SHARE = 0.15, (0.01, 0.05)
+#: Share of recordings without noise events; of the others most have far less than the most, which is 10 Hz a pixel.
+QUIET, MOST_NOISE_HZ = 0.1, 10.0
+#: Share of the time that bursts of lost events take up, and the length of a burst, milliseconds.
+BURSTS, BURST_MS = (0.02, 0.12), (1, 5)
 
 
 @dataclass(frozen=True)
@@ -37,6 +43,10 @@ class Violations:
         Share of events lost where they come too thick, or all over.
     lost_where : str
         ``dense`` (in crowded spots), ``busy`` (in crowded milliseconds) or ``all``.
+    bursts : float
+        Share of the time in which every event is lost, in bursts of whole milliseconds.
+    burst_ms : int
+        Length of each.
     lag_us : float
         How late a dark pixel's events are; light 0.1 halves it.
     pedestal : float
@@ -49,6 +59,8 @@ class Violations:
 
     lost: float = 0.0
     lost_where: str = "all"
+    bursts: float = 0.0
+    burst_ms: int = 0
     lag_us: float = 0.0
     pedestal: float = 0.0
     gain: float = 1.0
@@ -166,7 +178,8 @@ def draw_recipe(seed: int, index: int, held_out: bool = False) -> tuple[Recipe, 
     # A camera whose every 2nd or 4th frame is used is a camera of that rate with a shorter share of exposure.
     stride = int(rng.choice([1, 2, 4], p=[0.6, 0.25, 0.15]))
     gap_px = _log_uniform(rng, 4.0, 60.0) if rng.random() < 0.92 else _log_uniform(rng, 0.5, 4.0)
-    share = min(rng.uniform(0.05, 0.9) / stride, MOST_BLUR_PX / gap_px)
+    open_share = rng.uniform(*SHARP_SHARE) if rng.random() < SHARP else rng.uniform(0.05, 0.9)
+    share = min(open_share / stride, MOST_BLUR_PX / gap_px)
     rate_hz = _log_uniform(rng, 15.0, 120.0) / stride
     exposure_us = share * 1e6 / rate_hz
     common = _log_uniform(rng, 0.1, 0.4)
@@ -180,7 +193,7 @@ def draw_recipe(seed: int, index: int, held_out: bool = False) -> tuple[Recipe, 
         rate_hz=rate_hz,
         contrast=(common, float(np.clip(common * rng.uniform(0.75, 1.3), 0.1, 0.4))),
         mismatch=rng.uniform(0.0, 0.08),
-        noise_hz=rng.uniform(0.0, 5.0) * (rng.random() < 0.7),
+        noise_hz=_log_uniform(rng, 0.03, MOST_NOISE_HZ) * (rng.random() >= QUIET),
         refractory_us=rng.uniform(0.0, 300.0),
         leak_hz=rng.uniform(0.0, 0.2),
         jitter_us=_log_uniform(rng, 5.0, 300.0),
@@ -205,7 +218,7 @@ def _rig_error(rng: Rng, exposure_us: float, us_per_px: float) -> RigError:
         contrast=(common * rng.normal(1.0, 0.05), common * rng.normal(1.0, 0.05)),
         clock_us=round(rng.uniform(-most, most)),
         ramp_us=int(exposure_us * rng.choice([0.0, 1 / 16, 1 / 8, 1 / 4])),
-        hot_known=rng.uniform(0.5, 1.0),
+        hot_known=rng.uniform(0.3, 1.0),
         noise=_log_uniform(rng, 0.7, 1.5),
     )
 
@@ -215,6 +228,7 @@ def _violations(rng: Rng, speed_px_s: float) -> Violations:
     most_lag = min(8_000.0, 6e6 / speed_px_s)
     drawn = {
         "lost": rng.uniform(0.1, 0.4),
+        "bursts": rng.uniform(*BURSTS),
         "lag_us": rng.uniform(0.25, 1.0) * most_lag,
         "pedestal": rng.uniform(0.01, 0.12),
         "gain": rng.uniform(1.3, 2.0),
@@ -222,7 +236,8 @@ def _violations(rng: Rng, speed_px_s: float) -> Violations:
     }
     chosen = rng.choice(list(drawn), size=int(rng.integers(1, 3)), replace=False)
     where = str(rng.choice(["dense", "busy", "all"]))
-    return Violations(lost_where=where, **{name: drawn[name] for name in chosen.tolist()})
+    burst_ms = int(rng.integers(BURST_MS[0], BURST_MS[1] + 1))
+    return Violations(lost_where=where, burst_ms=burst_ms, **{name: drawn[name] for name in chosen.tolist()})
 
 
 def _log_uniform(rng: Rng, low: float, high: float) -> float:

@@ -132,6 +132,8 @@ def _spoiled(events: Events, frames: FrameArray, violations: Violations, rng: Rn
     """Lose some events and let dark pixels' be late; gives the mean delay as well."""
     if violations.lost:
         events = events.keep(_kept(events, violations, rng))
+    if violations.bursts and len(events):
+        events = events.keep(_outside_bursts(events.t_us, violations, rng))
     if not violations.lag_us or not len(events):
         return events, 0.0
     # Light as of the frame nearest in time, blurred against its noise.
@@ -162,6 +164,17 @@ def _kept(events: Events, violations: Violations, rng: Rng) -> NDArray[np.bool_]
     # What exceeds a capacity is lost; the capacity is one at which about the asked share goes.
     capacity = np.quantile(crowd, 0.5) * (1 - violations.lost)
     return rng.random(len(events)) < capacity / crowd
+
+
+def _outside_bursts(t_us: NDArray[np.int64], violations: Violations, rng: Rng) -> NDArray[np.bool_]:
+    """Choose the events outside the bursts in which all are lost, shape (N,); a burst at least."""
+    millisecond = (t_us - t_us[0]) // 1000
+    span_ms = int(millisecond[-1]) + 1
+    count = max(1, round(violations.bursts * span_ms / violations.burst_ms))
+    starts = rng.integers(0, max(span_ms - violations.burst_ms, 1), count)
+    lost = np.zeros(span_ms + violations.burst_ms, dtype=np.bool_)
+    lost[starts[:, None] + np.arange(violations.burst_ms)] = True
+    return ~lost[millisecond]
 
 
 def _disturbed(recipe: Recipe, simulated: Simulated, delay_us: float, rng: Rng) -> Rig:
