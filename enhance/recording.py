@@ -379,12 +379,19 @@ class Picture:
         Its instant of the scene.
     kind : Kind
     by : By
-    expected_psnr : float or None
-        dB against the sharp truth; None where it is not known.
+    error : ndarray of float32, shape (H, W), optional
+        Expected squared error of each pixel against the sharp, noise-free truth, in the signal of the frames' own curve
+        with 1 = full scale; None where it is not known.
     """
 
     image: Image
     time_us: int
     kind: Kind
     by: By
-    expected_psnr: float | None = None
+    error: NDArray[np.float32] | None = None
+
+    @property
+    def expected_psnr(self) -> float | None:
+        """PSNR, in dB, that the expected error stands for; None where that is not known, 100 at the most."""
+        # PSNR = -10 log10(mean squared error), full scale being 1
+        return None if self.error is None else float(-10 * np.log10(max(self.error.mean(dtype=np.float64), 1e-10)))

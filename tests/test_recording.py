@@ -4,7 +4,7 @@ import numpy as np
 import pytest
 
 from enhance.light import Light
-from enhance.recording import Contrast, EventArray, Events, Frame, FrameArray, Kind
+from enhance.recording import By, Contrast, EventArray, Events, Frame, FrameArray, Kind, Picture
 
 EPOCH_US = 1_589_163_147_364_965
 
@@ -86,3 +86,18 @@ def test_frames_in_memory_are_decoded_through_their_curve(shape):
 
 def test_kinds_are_written_as_their_words():
     assert [f"{kind}" for kind in Kind] == ["captured", "deblurred", "inserted"]
+
+
+@pytest.mark.parametrize(
+    ("error", "decibel"),
+    [
+        ([[1e-3, 1e-3]], 30.0),
+        ([[0.0, 2e-4]], 40.0),  # the mean counts, not the mean of the pixels' own dB
+        ([[0.0, 0.0]], 100.0),
+        (None, None),
+    ],
+)
+def test_expected_psnr_is_that_of_the_mean_expected_error(error, decibel):
+    error = None if error is None else np.array(error, np.float32)
+    picture = Picture(np.zeros((1, 2), np.float32), 0, Kind.INSERTED, By.NETWORK, error)
+    assert picture.expected_psnr == (None if decibel is None else pytest.approx(decibel, abs=1e-5))
