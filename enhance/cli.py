@@ -23,7 +23,7 @@ if TYPE_CHECKING:
 #: Plain progress lines come at most this often, in seconds: a night's log stays readable.
 LINE_EVERY_S = 5.0
 #: Kinds of invented scene; stated here so that help needs no import, and held against `simulate` by a test.
-KINDS = ("texture", "parts", "fan", "drops", "label", "thin", "zoom", "cloth", "text")
+KINDS = ("texture", "parts", "fan", "drops", "label", "thin", "zoom", "cloth", "text", "fluid", "glass", "specks")
 
 WRONG_COMMAND, FAILED, INTERRUPTED = 2, 1, 130
 
