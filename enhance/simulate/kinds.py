@@ -32,7 +32,8 @@ def make_scene(
     rng : numpy.random.Generator
     speed_px_s : float
         The speed that the fastest part of the picture reaches, pixels a second; the scene's own `speed_px_s` is a
-        bound on it and may stand a little higher.
+        bound on it and may stand a little higher. A fluid keeps to it too, but its fastest part reaches half to four
+        fifths of it.
     color : bool
         R, G, B instead of grey.
     textures : str
