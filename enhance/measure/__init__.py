@@ -6,6 +6,7 @@ from enhance.measure.fidelity import psnr, ssim
 from enhance.measure.heldout import Figure, exposure_times, re_expose, summarise
 from enhance.measure.moving import moving_mask, support_filter
 from enhance.measure.noise import ceiling, noise_sigma
+from enhance.measure.rank import rank_correlation
 from enhance.measure.sharpness import sharpness
 
 __all__ = [
@@ -18,6 +19,7 @@ __all__ = [
     "mtf50",
     "noise_sigma",
     "psnr",
+    "rank_correlation",
     "re_expose",
     "rise_10_90",
     "sharpness",
