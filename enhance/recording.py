@@ -380,8 +380,8 @@ class Picture:
     kind : Kind
     by : By
     error : ndarray of float32, shape (H, W), optional
-        Expected squared error of each pixel against the sharp, noise-free truth, in the signal of the frames' own curve
-        with 1 = full scale; None where it is not known.
+        Expected squared error of each pixel against the sharp, noise-free truth, in code values of the frames' own
+        curve over full scale (colour: mean of R, G, B); None where it is not known.
     """
 
     image: Image

@@ -4,6 +4,7 @@ from enhance.write import cautions
 from enhance.write.stills import write_still
 from enhance.write.strip import caption_line
 from enhance.write.tables import write_json, write_table, write_text
+from enhance.write.trust import write_trust
 from enhance.write.video import ClipWriter
 from enhance.write.whole import probe_folder, whole_file
 
@@ -17,4 +18,5 @@ __all__ = [
     "write_still",
     "write_table",
     "write_text",
+    "write_trust",
 ]

@@ -7,6 +7,9 @@ import zlib
 from collections.abc import Mapping
 from pathlib import Path
 
+import numpy as np
+from numpy.typing import NDArray
+
 from enhance.errors import WriteError
 from enhance.light import Image, Light
 from enhance.write.levels import own_levels
@@ -35,14 +38,18 @@ def write_still(path: Path, linear_image: Image, light: Light, text: Mapping[str
     WriteError
         If the file cannot be written, or a keyword is none that PNG allows.
     """
+    write_levels(path, own_levels(linear_image, light), text)
+
+
+def write_levels(path: Path, levels: NDArray[np.uint16], text: Mapping[str, str]) -> None:
+    """Write 16-bit levels, grey or R, G, B, as a PNG with text; raises as `write_still`."""
     import cv2
 
-    levels = own_levels(linear_image, light)
     stored = levels if levels.ndim == 2 else levels[..., ::-1]
     # 16-bit noise hardly shrinks further at a higher level, but takes several times as long.
     ok, encoded = cv2.imencode(".png", stored, [cv2.IMWRITE_PNG_COMPRESSION, 3])
     if not ok:
-        raise WriteError(f"{path}: a picture of shape {linear_image.shape} cannot be stored as PNG.")
+        raise WriteError(f"{path}: a picture of shape {levels.shape} cannot be stored as PNG.")
     data = encoded.tobytes()
     chunks = b"".join(_text_chunk(path, keyword, value) for keyword, value in text.items())
     with whole_file(path) as partial:

@@ -11,11 +11,11 @@ from enhance.recording import Kind
 SEPARATOR = "   "
 
 _BACKGROUND, _INK = 0.08, 0.92
-_LONGEST_LINE = SEPARATOR.join(["t = 0000.000000 s", "deblurred", "expected: not known"])
-_LONGEST_PART = "expected: not known"
+_LONGEST_PART = "expected 00.0 dB, LOW"
+_LONGEST_LINE = SEPARATOR.join(["t = 0000.000000 s", "deblurred", _LONGEST_PART])
 
 
-def caption_line(time_us: int, kind: Kind, expected_psnr: float | None) -> str:
+def caption_line(time_us: int, kind: Kind, expected_psnr: float | None, low: bool = False) -> str:
     """Caption of one picture.
 
     Parameters
@@ -25,6 +25,8 @@ def caption_line(time_us: int, kind: Kind, expected_psnr: float | None) -> str:
     kind : Kind
     expected_psnr : float or None
         dB; left out for a captured picture.
+    low : bool
+        Below what the job asks for.
 
     Returns
     -------
@@ -38,7 +40,7 @@ def caption_line(time_us: int, kind: Kind, expected_psnr: float | None) -> str:
     sign, size = "-" if time_us < 0 else "", abs(int(time_us))
     parts = [f"t = {sign}{size // 1_000_000}.{size % 1_000_000:06d} s", str(kind)]
     if expected_psnr is not None:
-        parts.append(f"expected {expected_psnr:.1f} dB")
+        parts.append(f"expected {expected_psnr:.1f} dB{', LOW' if low else ''}")
     elif kind is not Kind.CAPTURED:
         parts.append("expected: not known")
     return SEPARATOR.join(parts)

@@ -12,18 +12,24 @@ from enhance.recording import Kind
 from enhance.write import ClipWriter, caption_line
 from enhance.write.strip import draw_strip, strip_rows
 
-LONG = caption_line(1_234_567_890, Kind.DEBLURRED, None)
+LONG = caption_line(1_234_567_890, Kind.DEBLURRED, 28.88, low=True)
 
 
 def test_a_caption_says_when_what_and_how_good():
     assert caption_line(12_345_678, Kind.INSERTED, 34.14) == "t = 12.345678 s   inserted   expected 34.1 dB"
     assert caption_line(-5, Kind.INSERTED, None) == "t = -0.000005 s   inserted   expected: not known"
     assert caption_line(0, Kind.CAPTURED, None) == "t = 0.000000 s   captured"
+    assert caption_line(0, Kind.INSERTED, 28.3, low=True) == "t = 0.000000 s   inserted   expected 28.3 dB, LOW"
 
 
 @pytest.mark.parametrize("width", [100, 160, 346, 640, 1280, 1920, 3840])
 def test_the_longest_caption_fits_inside_the_strip(width):
-    band = draw_strip(width, LONG)
+    check_that_it_fits(width, LONG)
+    check_that_it_fits(width, caption_line(1_234_567_890, Kind.DEBLURRED, None))
+
+
+def check_that_it_fits(width: int, caption: str) -> None:
+    band = draw_strip(width, caption)
     rows = strip_rows(width)
     assert band.shape == (rows, width)
     assert rows % 2 == 0
