@@ -10,6 +10,9 @@ from dataclasses import dataclass, field
 from fractions import Fraction
 from pathlib import Path
 
+#: What pictures below `ClipSettings.least_psnr` are called wherever pictures are counted.
+BELOW_LEAST = "below measure.least_psnr"
+
 
 @dataclass(frozen=True)
 class FramesSettings:
@@ -137,6 +140,8 @@ class OutputSettings:
         Stills of exactly these instants, from the first frame's time.
     strip : bool
         A caption strip in the clip.
+    trust : bool
+        A map of the expected error beside every still that has one.
     """
 
     folder: Path
@@ -144,6 +149,7 @@ class OutputSettings:
     stills: str = "all"
     times_us: tuple[int, ...] = ()
     strip: bool = False
+    trust: bool = False
 
 
 @dataclass(frozen=True)
@@ -156,6 +162,8 @@ class ClipSettings:
         The second pass uses every n-th frame only; 0: no second pass.
     network : str
         ``fusion`` or ``off``.
+    least_psnr : float, optional
+        Pictures whose expected PSNR, in dB, is lower are marked and counted.
     """
 
     title: str
@@ -166,3 +174,4 @@ class ClipSettings:
     slow_motion: SlowMotionSettings | None = None
     hold_out: int = 0
     network: str = "fusion"
+    least_psnr: float | None = None

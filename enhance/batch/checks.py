@@ -39,7 +39,7 @@ def mistakes_of_keys(document: Document) -> list[Mistake]:
     -------
     list of (key path, message)
     """
-    return [each for check in (_light, _cover, _grid, _windows, _hold_out) for each in check(document)]
+    return [each for check in (_light, _cover, _grid, _windows, _hold_out, _trust) for each in check(document)]
 
 
 def mistakes_of_files(document: Document, job: Path) -> list[Mistake]:
@@ -135,6 +135,18 @@ def _hold_out(document: Document) -> Iterator[Mistake]:
         yield (
             ("measure", "hold_out"),
             "found 1; every frame would be used and none be left to compare with. Write 2 or more, or 0 for none",
+        )
+
+
+def _trust(document: Document) -> Iterator[Mistake]:
+    output = document.get("output")
+    if not isinstance(output, Mapping) or output.get("trust") is not True:
+        return
+    if output.get("stills") == "none" and not output.get("times"):
+        yield (
+            ("output", "trust"),
+            'found true, but a trust map stands beside a still, and none is written: stills is "none" and times '
+            'names no instant. Write stills = "all" or "deblurred", name times, or leave trust out',
         )
 
 

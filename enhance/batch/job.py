@@ -122,6 +122,7 @@ def _settings(tables: JobTables, path: Path) -> ClipSettings:
         slow_motion=_slow_motion(tables.slow_motion) if tables.slow_motion else None,
         hold_out=tables.measure.hold_out,
         network=tables.network.use,
+        least_psnr=tables.measure.least_psnr,
     )
 
 
@@ -166,4 +167,5 @@ def _output(table: OutputTable, folder: Path) -> OutputSettings:
         stills=table.stills,
         times_us=tuple(sorted(set(table.times))),
         strip=table.strip,
+        trust=table.trust,
     )

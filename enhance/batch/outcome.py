@@ -8,6 +8,8 @@ from dataclasses import dataclass, field
 from enum import StrEnum
 from pathlib import Path
 
+from enhance.settings import BELOW_LEAST
+
 
 class Outcome(StrEnum):
     """How one job ended."""
@@ -105,10 +107,13 @@ class ShelfReport:
 
     @property
     def closing_line(self) -> str:
-        """Counts of each outcome, cautions, and where to look."""
+        """Counts of each outcome, pictures below what was asked for, cautions, and where to look."""
         counts = Counter(job.outcome for job in self.jobs)
         jobs = "1 job" if len(self.jobs) == 1 else f"{len(self.jobs)} jobs"
         told = [f"{jobs}: " + ", ".join(f"{counts[each]} {each}" for each in Outcome if counts[each])]
+        below = sum(job.counts.get(BELOW_LEAST, 0) for job in self.jobs)
+        if below:
+            told.append(f"{below} picture{'' if below == 1 else 's'} {BELOW_LEAST}, marked in pictures.csv")
         cautions = sum(len(job.cautions) for job in self.jobs)
         if cautions:
             told.append(f"{cautions} caution{'' if cautions == 1 else 's'} above, kept in each record.json")

@@ -218,7 +218,7 @@ def _listed(folder: Path, names: Iterable[Any]) -> Iterator[Path]:
 #: Names this tool gives: what a run that was cut short left is told from a person's own files by these.
 _PRODUCT = re.compile(
     r"slow-motion\.(mp4|mkv)|frames\.csv|pictures\.csv|held-out\.csv|quality\.json|rig\.toml"
-    r"|(stills|held-out)/\d{16}\.png"
+    r"|(stills|trust|held-out)/\d{16}\.png"
 )
 
 
@@ -250,7 +250,7 @@ def products(folder: Path) -> dict[str, int]:
     dict
         Path relative to the folder, to the time of its last change in nanoseconds.
     """
-    places = [folder, folder / "stills", folder / "held-out"]
+    places = [folder, folder / "stills", folder / "trust", folder / "held-out"]
     files = [path for place in places if place.is_dir() for path in place.iterdir() if path.is_file()]
     named = {path.relative_to(folder).as_posix(): path.stat().st_mtime_ns for path in files}
     return {name: changed for name, changed in sorted(named.items()) if _PRODUCT.fullmatch(name)}

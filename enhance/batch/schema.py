@@ -60,6 +60,15 @@ def _rate(value: Any) -> Fraction:
     return Fraction(str(number))  # 29.97 as written, not as the nearest binary number
 
 
+def _least_psnr(value: Any) -> float:
+    number = _number(value)
+    if number < 0:
+        raise ValueError(
+            f"found {number}; pictures can be asked to reach 0 dB or more, such as 30. Leave the key out to mark none"
+        )
+    return float(number)
+
+
 def _curve(value: Any) -> str:
     if not isinstance(value, str):
         raise ValueError('expected text, such as "srgb"')
@@ -233,6 +242,7 @@ class MeasureTable(_Table):
     """``[measure]``."""
 
     hold_out: Annotated[int, Field(ge=0)] = 0
+    least_psnr: Annotated[float | None, PlainValidator(_least_psnr)] = None
 
 
 class NetworkTable(_Table):
@@ -249,6 +259,7 @@ class OutputTable(_Table):
     stills: Literal["none", "deblurred", "all"] = "all"
     times: list[LaterDuration] = []
     strip: bool = False
+    trust: bool = False
 
 
 class JobTables(_Table):

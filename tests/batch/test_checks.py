@@ -70,3 +70,9 @@ def test_mistakes_of_keys_and_of_files_are_told_together(write_job) -> None:
         read_job(write_job(changes))
     keys = [mistake.split(": ")[1] for mistake in caught.value.mistakes]
     assert keys == ["frames.exposure", "events.source", "output.folder", "measure.hold_out"]
+
+
+@pytest.mark.parametrize("changes", [{"output.stills": '"deblurred"'}, {"output.times": '["1 s"]'}])
+def test_trust_maps_can_stand_beside_any_still(write_job, changes: dict[str, str]) -> None:
+    output = read_job(write_job({"output.trust": "true", "output.stills": '"none"', **changes})).output
+    assert output.trust

@@ -39,6 +39,7 @@ playback_rate = 25
 windows = [{ from = "2.10 s", to = "2.25 s" }, { from = "0 s", to = "1 s" }]
 [measure]
 hold_out = 4
+least_psnr = 30
 [network]
 use = "off"
 [output]
@@ -47,6 +48,7 @@ video = "ffv1"
 stills = "deblurred"
 times = ["2.134 s", "1 s", "1 s"]
 strip = true
+trust = true
 """
 
 
@@ -67,6 +69,7 @@ def test_every_key_of_the_contract_arrives(write_job, tmp_path: Path) -> None:
         settings.output,
     )
     assert (settings.title, settings.hold_out, settings.network) == ("Labelling wheel, line 3", 4, "off")
+    assert settings.least_psnr == 30.0
     assert (frames.source, frames.times) == (tmp_path / "frames", tmp_path / "frames.csv")
     assert (frames.exposure_us, frames.time_marks, frames.light_curve) == (20_000, "end", "gamma 2.2")
     assert (frames.black, frames.white, frames.crop) == (16, 4095.5, (1, 2, 300, 200))
@@ -78,7 +81,7 @@ def test_every_key_of_the_contract_arrives(write_job, tmp_path: Path) -> None:
     assert (slow.factor, slow.scene_rate, slow.playback_rate) == (None, Fraction(95994, 100), Fraction(25))
     assert slow.windows == (Window(0, 1_000_000), Window(2_100_000, 2_250_000))
     assert output.folder == tmp_path / "out" / "wheel"
-    assert (output.video, output.stills, output.strip) == ("ffv1", "deblurred", True)
+    assert (output.video, output.stills, output.strip, output.trust) == ("ffv1", "deblurred", True, True)
     assert output.times_us == (1_000_000, 2_134_000)
 
 
@@ -87,6 +90,7 @@ def test_what_is_left_out_gets_the_contracts_defaults(write_job) -> None:
     assert settings == ClipSettings(title="job", frames=settings.frames, events=settings.events, output=settings.output)
     assert (settings.frames.black, settings.frames.white, settings.frames.exposure_us) == (None, None, None)
     assert (settings.output.video, settings.output.stills, settings.output.strip) == ("h264", "all", False)
+    assert (settings.output.trust, settings.least_psnr) == (False, None)
     assert (settings.rig.contrast, settings.rig.offset_us, settings.rig.unknown) == (None, None, "stop")
 
 
@@ -192,9 +196,21 @@ WRONG = [
     ({"measure.hold_out": "1"}, "found 1; every frame would be used and none be left to compare with"),
     ({"measure.hold_out": "-2"}, "found -2; expected 0 or more"),
     ({"measure.hold_out": "true"}, "found true; expected a whole number"),
+    ({"measure.least_psnr": "-3"}, "least_psnr: found -3; pictures can be asked to reach 0 dB or more, such as 30"),
+    ({"measure.least_psnr": "nan"}, "measure.least_psnr: found nan; expected a finite number"),
+    ({"measure.least_psnr": "-inf"}, "measure.least_psnr: found -inf; expected a finite number"),
+    (
+        {"measure.least_psnr": '"30 dB"'},
+        'least_psnr: found the text "30 dB"; expected a number, without quotation marks',
+    ),
     ({"network.use": '"fuse"'}, 'did you mean "fusion"'),
     ({"output.video": '"h265"'}, 'expected one of "h264", "ffv1", "none"; did you mean "h264"'),
     ({"output.times": '["1 s", 2]'}, r"output.times\[1\]: 2 has no unit"),
+    ({"output.trust": "1"}, "output.trust: found 1; expected true or false, without quotation marks"),
+    (
+        {"output.trust": "true", "output.stills": '"none"'},
+        'trust: found true, but .* none is written: .*Write stills = "all"',
+    ),
     ({"netwrk.use": '"off"'}, "netwrk: is not a known key; did you mean network"),
     ({"output.factor": "3"}, "output.factor: is not a known key here; did you mean slow_motion.factor"),
     ({"events.qqqq": "3"}, "is not a known key; known here: source, columns, time_unit, size, cover"),

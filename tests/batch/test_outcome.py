@@ -44,6 +44,23 @@ def test_the_last_line_counts_outcomes_and_says_where_to_look() -> None:
     assert "look in out/0, out/3: quality.json" in line
 
 
+@pytest.mark.parametrize(
+    ("counts", "told"),
+    [
+        ([2, 1], "2 jobs: 2 done; 3 pictures below measure.least_psnr, marked in pictures.csv; look in "),
+        ([0, 1], "2 jobs: 2 done; 1 picture below measure.least_psnr, marked in pictures.csv; look in "),
+        ([0, 0], "2 jobs: 2 done; look in "),
+    ],
+)
+def test_the_last_line_counts_pictures_below_what_was_asked_for(counts: list[int], told: str) -> None:
+    jobs = [
+        JobReport(Path("a.toml"), "t", DONE, Path("out"), counts={"inserted": 9, "below measure.least_psnr": count})
+        for count in counts
+    ]
+    assert ShelfReport(tuple(jobs)).closing_line.startswith(told)
+    assert (f", {counts[0]} below measure.least_psnr -> " in jobs[0].text()) == bool(counts[0])
+
+
 def test_the_last_line_of_a_command_that_started_nothing_says_so() -> None:
     assert shelf(REFUSED).closing_line == "1 job: 1 refused; nothing was started; mend what is named above."
 

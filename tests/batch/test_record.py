@@ -121,9 +121,10 @@ def test_versions_name_the_packages_that_can_change_a_result() -> None:
 
 
 def test_only_files_with_a_results_name_count_as_left_by_a_run(tmp_path: Path) -> None:
-    (tmp_path / "stills").mkdir()
-    for name in ("pictures.csv", "mine.txt", "stills/0000000000000007.png", "stills/mine.png"):
+    results = ["pictures.csv", "stills/0000000000000007.png", "trust/0000000000000007.png"]
+    for name in (*results, "mine.txt", "stills/mine.png", "trust/mine.png"):
+        (tmp_path / name).parent.mkdir(exist_ok=True)
         (tmp_path / name).write_text("x")
-    assert list(record.products(tmp_path)) == ["pictures.csv", "stills/0000000000000007.png"]
+    assert list(record.products(tmp_path)) == results
     before = {"pictures.csv": record.products(tmp_path)["pictures.csv"]}
-    assert record.left_over(tmp_path, before) == ["stills/0000000000000007.png"]
+    assert record.left_over(tmp_path, before) == results[1:]
