@@ -154,4 +154,5 @@ def _cost(recording: Recording, settings: ClipSettings, pictures: int) -> tuple[
         seconds += calibration + held * pixels * (JUDGED_S + each * (EXPOSED if blurred else 1))
     stills = {"none": 0, "deblurred": min(keys, pictures), "all": pictures}[settings.output.stills]
     per_pixel = colours * (stills * STILL_BYTES + pictures * CLIP_BYTES[settings.output.video])
+    per_pixel += stills * STILL_BYTES * settings.output.trust
     return seconds, int(pixels * per_pixel) + 1_000_000

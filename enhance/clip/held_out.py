@@ -47,6 +47,7 @@ COLUMNS = (
     "re_exposed",
     "sharpness",
     "sharpness_captured",
+    "expected_psnr",
 )
 
 
@@ -99,6 +100,7 @@ def judge(pictures: Pictures, index: int) -> Judged:
     figures["re_exposed"] = len(times)
     figures["sharpness"] = sharpness(_codes(sharp.image, light), light.full_scale, moving)
     figures["sharpness_captured"] = sharpness(reference, light.full_scale, moving)
+    figures["expected_psnr"] = sharp.expected_psnr
     return Judged(sharp, figures)
 
 

@@ -10,15 +10,26 @@ from typing import Any
 
 from enhance.clip.held_out import COLUMNS, Judged
 from enhance.clip.plan import Plan, Planned
+from enhance.clip.quality import Expected
 from enhance.clock import middle_us
 from enhance.light import Light
 from enhance.recording import FrameSource, Kind, Picture
 from enhance.settings import ClipSettings
-from enhance.write import ClipWriter, caption_line, cautions, write_json, write_still, write_table, write_text
+from enhance.write import (
+    ClipWriter,
+    caption_line,
+    cautions,
+    write_json,
+    write_still,
+    write_table,
+    write_text,
+    write_trust,
+)
 
 #: Name of the clip for each codec.
 CLIPS = {"h264": "slow-motion.mp4", "ffv1": "slow-motion.mkv"}
-_HEADER = ("time_us", "pts_us", "kind", "by", "expected_psnr", "still")
+_HEADER = ("time_us", "pts_us", "kind", "by", "expected_psnr", "still", "below_least")
+_BELOW = {True: "yes", False: "no", None: None}
 
 
 class Outputs:
@@ -37,6 +48,7 @@ class Outputs:
         self.files: list[str] = []
         self._settings, self._light, self._plan = settings, frames.light, plan
         self._first_us = middle_us(int(frames.start_us[0]), int(frames.end_us[0]))
+        self.expected: list[Expected] = []
         self._rows: list[tuple[Any, ...]] = []
         self._asked = {self._first_us + t for t in settings.output.times_us}
         self._stack = ExitStack()
@@ -54,13 +66,17 @@ class Outputs:
             self.table("pictures.csv", _HEADER, self._rows)
 
     def add(self, planned: Planned, picture: Picture) -> None:
-        """Write one picture wherever it belongs: clip, still, table."""
+        """Write one picture wherever it belongs: clip, still, trust map, table."""
+        expected = Expected(picture.time_us, picture.kind, picture.expected_psnr)
+        below = expected.below(self._settings.least_psnr)
         if self._clip is not None and planned.pts_us is not None:
-            caption = caption_line(picture.time_us - self._first_us, picture.kind, picture.expected_psnr)
+            caption = caption_line(picture.time_us - self._first_us, picture.kind, expected.psnr, below is True)
             self._clip.add(picture.image, planned.pts_us, caption)
         still = self._still(picture) if self._wants_still(picture) else None
+        psnr = None if expected.psnr is None else f"{expected.psnr:.2f}"
+        self.expected.append(expected)
         self._rows.append(
-            (picture.time_us, planned.pts_us, str(picture.kind), str(picture.by), picture.expected_psnr, still)
+            (picture.time_us, planned.pts_us, str(picture.kind), str(picture.by), psnr, still, _BELOW[below])
         )
 
     def held_out(self, judged: list[Judged]) -> None:
@@ -114,14 +130,21 @@ class Outputs:
     def _still(self, picture: Picture) -> str:
         name = f"stills/{picture.time_us:016d}.png"
         self._write_still(name, picture)
+        if self._settings.output.trust and picture.error is not None:
+            beside = f"trust/{picture.time_us:016d}.png"
+            write_trust(self.folder / beside, picture.error, self._text(picture))
+            self.files.append(beside)
         return name
 
     def _write_still(self, name: str, picture: Picture) -> None:
-        write_still(self.folder / name, picture.image, self._light, still_text(picture, self._first_us))
+        write_still(self.folder / name, picture.image, self._light, self._text(picture))
         self.files.append(name)
 
+    def _text(self, picture: Picture) -> dict[str, str]:
+        return still_text(picture, self._first_us, self._settings.least_psnr)
 
-def still_text(picture: Picture, first_us: int) -> dict[str, str]:
+
+def still_text(picture: Picture, first_us: int, least_psnr: float | None = None) -> dict[str, str]:
     """Say what a picture is, for its PNG text.
 
     Parameters
@@ -129,18 +152,23 @@ def still_text(picture: Picture, first_us: int) -> dict[str, str]:
     picture : Picture
     first_us : int
         Time of the recording's first frame.
+    least_psnr : float, optional
+        What the job asks for.
 
     Returns
     -------
     dict of str to str
     """
-    expected = "not known" if picture.expected_psnr is None else f"{picture.expected_psnr:.1f}"
+    expected = "not known" if picture.expected_psnr is None else f"{picture.expected_psnr:.2f}"
+    below = Expected(picture.time_us, picture.kind, picture.expected_psnr).below(least_psnr)
+    asked = {} if below is None else {f"Below {least_psnr:g} dB": "yes" if below else "no"}
     return {
         "Kind": str(picture.kind),
         "Made by": str(picture.by),
         "Scene time (us)": str(picture.time_us),
         "From the first frame (s)": f"{(picture.time_us - first_us) / 1e6:.6f}",
         "Expected PSNR (dB)": expected,
+        **asked,
         "Caution": cautions.OF_KIND[picture.kind],
     }
 

@@ -18,13 +18,13 @@ from enhance.clip.keys import Keys
 from enhance.clip.outputs import Outputs
 from enhance.clip.pictures import Pictures
 from enhance.clip.plan import Plan, make_plan
-from enhance.clip.quality import held_out_summary, sharpness_summary
+from enhance.clip.quality import below_count, expected_notes, expected_summary, held_out_summary, sharpness_summary
 from enhance.clip.source import events_on_frames, light_remarks, opened
 from enhance.errors import CalibrationError
 from enhance.measure import sharpness
 from enhance.recording import By, Kind, Recording
 from enhance.rig import Rig
-from enhance.settings import ClipSettings
+from enhance.settings import BELOW_LEAST, ClipSettings
 from enhance.shipped import shipped_folder
 from enhance.write import cautions, write_text
 
@@ -185,11 +185,13 @@ def _run(recording: Recording, settings: ClipSettings, state: _Progress) -> Clip
         outputs.text("rig.toml", rig_text(rig))
         with state.stage("pictures"):
             counts, sharp = _deliver(Pictures(keys, network), plan, outputs, state)
+    if settings.least_psnr is not None:
+        counts[BELOW_LEAST] = below_count(outputs.expected, settings.least_psnr)
     figures: dict[str, Any] = {
         "title": settings.title,
         "pictures": dict(counts),
         "deblurring": sharp,
-        "expected_psnr": "not known: no figure of trust is attached to single pictures yet",
+        "expected_psnr": expected_summary(outputs.expected, settings.least_psnr),
         "cautions": cautions.LONG,
     }
     with state.stage("held_out"):
@@ -198,8 +200,15 @@ def _run(recording: Recording, settings: ClipSettings, state: _Progress) -> Clip
         else:
             figures["held_out"] = None
     outputs.record("quality.json", figures)
-    notes = _notes(recording, rig, plan, counts)
+    notes = (*_notes(recording, rig, plan, counts), *_trust_notes(settings, outputs))
     return ClipResult(tuple(outputs.files), dict(counts), notes, figures, state.timings)
+
+
+def _trust_notes(settings: ClipSettings, outputs: Outputs) -> list[str]:
+    notes = expected_notes(outputs.expected, settings.least_psnr)
+    if settings.output.trust and not any(name.startswith("trust/") for name in outputs.files):
+        notes.append("output.trust: no map was written, since the expected error of no still is known")
+    return notes
 
 
 def _deliver(pictures: Pictures, plan: Plan, outputs: Outputs, state: _Progress) -> tuple[Counter[str], dict[str, Any]]:
