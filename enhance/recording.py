@@ -393,5 +393,6 @@ class Picture:
     @property
     def expected_psnr(self) -> float | None:
         """PSNR, in dB, that the expected error stands for; None where that is not known, 100 at the most."""
+        mean = np.nan if self.error is None else float(self.error.mean(dtype=np.float64))
         # PSNR = -10 log10(mean squared error), full scale being 1
-        return None if self.error is None else float(-10 * np.log10(max(self.error.mean(dtype=np.float64), 1e-10)))
+        return float(-10 * np.log10(max(mean, 1e-10))) if np.isfinite(mean) else None

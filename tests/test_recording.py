@@ -95,6 +95,8 @@ def test_kinds_are_written_as_their_words():
         ([[0.0, 2e-4]], 40.0),  # the mean counts, not the mean of the pixels' own dB
         ([[0.0, 0.0]], 100.0),
         (None, None),
+        ([[np.nan, 1e-3]], None),
+        ([[np.inf, 1e-3]], None),
     ],
 )
 def test_expected_psnr_is_that_of_the_mean_expected_error(error, decibel):
