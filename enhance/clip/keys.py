@@ -1,19 +1,28 @@
-"""The keys of one pass: the frames that are used, each turned into one sharp picture when it is asked for."""
+"""The keys of one pass: the frames that are used, each turned into one sharp picture when it is asked for.
+
+First by the multi-frame double integral; then, with a network, by what its neighbours say of it as well. Neighbours are
+those of the first step: no key waits for another's second one.
+"""
 
 from __future__ import annotations
 
 from collections import OrderedDict
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass
-from typing import TypeVar
+from typing import TYPE_CHECKING, TypeVar
 
 import numpy as np
 
 from enhance.clock import middle_us
 from enhance.deblur import WINDOW, Evidence, change_evidence, couple, own_evidence
-from enhance.light import LOG_FLOOR, log_light, luma
+from enhance.interpolate import Candidates, Span, analytic_blend, in_colour, key_candidates
+from enhance.kernels.event_integral import event_counts
+from enhance.light import LOG_FLOOR, encode, log_light, luma
 from enhance.recording import By, Events, Frame, FrameSource, Kind, Picture
 from enhance.rig import Rig, RiggedEvents
+
+if TYPE_CHECKING:
+    from enhance.interpolate.network import FusionNetwork
 
 T = TypeVar("T")
 #: A fiftieth of an exposure without events, at either end, is still within what a measured clock leaves open.
@@ -43,12 +52,23 @@ class Keys:
     events : RiggedEvents or None
         In the frames' world; None where the clock is not known: then every key stays as captured.
     rig : Rig
+    network : FusionNetwork, optional
+        Refines the keys; without it they stay as the double integral has them.
     """
 
-    def __init__(self, frames: FrameSource, indices: Sequence[int], events: RiggedEvents | None, rig: Rig) -> None:
+    def __init__(
+        self,
+        frames: FrameSource,
+        indices: Sequence[int],
+        events: RiggedEvents | None,
+        rig: Rig,
+        network: FusionNetwork | None = None,
+    ) -> None:
         self.frames, self.indices, self.events, self.rig = frames, list(indices), events, rig
+        self.network = network
         self.times_us = [_time(frames, index) for index in indices]
         self._kept = Evidences(OrderedDict(), OrderedDict())
+        self._integrals: OrderedDict[int, Picture] = OrderedDict()
         self._pictures: OrderedDict[int, Picture] = OrderedDict()
 
     def __len__(self) -> int:
@@ -69,6 +89,15 @@ class Keys:
         """Events of the span from a key to the next, and as far beyond either end as ramps reach."""
         return self._near(self.times_us[key], self.times_us[key + 1])
 
+    def exposed(self, key: int) -> np.ndarray:
+        """Count the events of each pixel within a key's exposure, float32, shape (H, W)."""
+        index = self.indices[key]
+        shape = (self.frames.shape[0], self.frames.shape[1])
+        if self.events is None:
+            return np.zeros(shape, np.float32)
+        seen = self.events.between(int(self.frames.start_us[index]), int(self.frames.end_us[index]))
+        return event_counts(seen.x, seen.y, seen.polarity, shape).sum(axis=0).astype(np.float32)
+
     def picture(self, key: int) -> Picture:
         """Make the sharp picture of a key at its own time; one that events do not cover stays as captured.
 
@@ -84,6 +113,46 @@ class Keys:
         return remember(self._pictures, key, lambda: self._picture(key), 4)
 
     def _picture(self, key: int) -> Picture:
+        picture = self.integral(key)
+        candidates = self.candidates(key) if self.network else None
+        if candidates is None:
+            return picture
+        light, by, _ = fused(self.network, candidates)
+        return Picture(in_colour(picture.image, light), picture.time_us, Kind.DEBLURRED, by)
+
+    def candidates(self, key: int) -> Candidates | None:
+        """Make what is known of a deblurred key by its neighbours; None where no neighbour can tell."""
+        picture = self.integral(key)
+        before = key > 0 and self.span_covered(key - 1)
+        after = key + 1 < len(self) and self.span_covered(key)
+        if picture.kind is not Kind.DEBLURRED or not (before or after):
+            return None
+        ends = (key - before, key + after)
+        left, right = (luma(self.integral(end).image) for end in ends)
+        interval = (self.times_us[ends[0]], self.times_us[ends[1]])
+        span = Span(left, right, interval, self._near(*interval), self.rig.contrast)
+        captured = luma(self.frames.frame(self.indices[key]).image)
+        alone = np.exp(self._own(key).value).astype(np.float32) - LOG_FLOOR
+        return key_candidates(luma(picture.image), captured, alone, picture.time_us, span, self.exposed(key))
+
+    def miss(self, key: int) -> np.ndarray:
+        """By how much the events miss the step from a key to the next, each by its own double integral.
+
+        Which is by how much the one, carried into the other's exposure and exposed again, misses that frame.
+
+        Returns
+        -------
+        ndarray of float32, shape (H, W)
+            Log light.
+        """
+        step = self._change(key).value
+        return np.asarray(self._own(key + 1).value - self._own(key).value - step, dtype=np.float32)
+
+    def integral(self, key: int) -> Picture:
+        """Make the picture of a key by the double integral alone; as `picture` without a network."""
+        return remember(self._integrals, key, lambda: self._integral(key), 5)
+
+    def _integral(self, key: int) -> Picture:
         frame = self.frames.frame(self.indices[key])
         time_us = self.times_us[key]
         if frame.exposure_us == 0 or not self.covered(key):
@@ -135,6 +204,18 @@ class Keys:
             return Events.none()
         ramp = self.rig.contrast.ramp_us
         return self.events.between(start_us - ramp, end_us + 2 * ramp)
+
+
+def fused(network: FusionNetwork | None, candidates: Candidates) -> tuple[np.ndarray, By, np.ndarray]:
+    """Make a picture's luma from its candidates: the light, what made it, and the spread of what it was made of."""
+    if network is None:
+        light = analytic_blend(candidates)
+        return light, By.INTEGRAL, encode("srgb", candidates.stack).var(axis=0)
+    # torch is loaded only where a network is used
+    from enhance.interpolate.network import fuse
+
+    light, spread = fuse(network, candidates)
+    return light, By.NETWORK, spread
 
 
 def _captured(frame: Frame, noise: np.ndarray) -> Evidence:

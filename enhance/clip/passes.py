@@ -176,7 +176,7 @@ def _run(recording: Recording, settings: ClipSettings, state: _Progress) -> Clip
     with state.stage("calibrate"):
         rig = measured_rig(recording, range(count), settings)
     network = load_fusion(settings)
-    keys = Keys(recording.frames, range(count), events_on_frames(recording, rig), rig)
+    keys = Keys(recording.frames, range(count), events_on_frames(recording, rig), rig, network)
     plan = make_plan(settings, keys.times_us)
     every = settings.hold_out if settings.hold_out and count > settings.hold_out else 0
     held = [i for i in range(count) if every and i % every and i < every * ((count - 1) // every)]
@@ -184,7 +184,7 @@ def _run(recording: Recording, settings: ClipSettings, state: _Progress) -> Clip
     with Outputs(settings, recording.frames, plan) as outputs:
         outputs.text("rig.toml", rig_text(rig))
         with state.stage("pictures"):
-            counts, sharp = _deliver(Pictures(keys, network), plan, outputs, state)
+            counts, sharp = _deliver(Pictures(keys), plan, outputs, state)
     if settings.least_psnr is not None:
         counts[BELOW_LEAST] = below_count(outputs.expected, settings.least_psnr)
     figures: dict[str, Any] = {
@@ -250,7 +250,7 @@ def _judge_all(
         rig = measured_rig(recording, keys, settings)
     except CalibrationError as error:
         return {"keys": f"every {every}. frame", "pictures": 0, "reason": f"the second pass cannot be made: {error}"}
-    pictures = Pictures(Keys(recording.frames, keys, events_on_frames(recording, rig), rig), network)
+    pictures = Pictures(Keys(recording.frames, keys, events_on_frames(recording, rig), rig, network))
     judged: list[Judged] = []
     for index in held:
         one = judge(pictures, index)

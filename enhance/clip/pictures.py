@@ -4,19 +4,15 @@ from __future__ import annotations
 
 from bisect import bisect_right
 from collections import OrderedDict
-from typing import TYPE_CHECKING
 
 import numpy as np
 from numpy.typing import NDArray
 
-from enhance.clip.keys import Keys, remember
-from enhance.interpolate import Span, analytic_blend, with_colour
+from enhance.clip.keys import Keys, fused, remember
+from enhance.interpolate import Span, with_colour
 from enhance.kernels.optical_flow import flow_between, moved_blend
 from enhance.light import Image
 from enhance.recording import By, Kind, Picture
-
-if TYPE_CHECKING:
-    from enhance.interpolate.network import FusionNetwork
 
 Flow = NDArray[np.float32]
 
@@ -27,12 +23,11 @@ class Pictures:
     Parameters
     ----------
     keys : Keys
-    network : FusionNetwork or None
-        None: the analytic blend.
+        With their network; without one, pictures are blended analytically.
     """
 
-    def __init__(self, keys: Keys, network: FusionNetwork | None) -> None:
-        self.keys, self.network = keys, network
+    def __init__(self, keys: Keys) -> None:
+        self.keys = keys
         self._spans: OrderedDict[int, Span] = OrderedDict()
         self._flows: OrderedDict[int, tuple[Flow, Flow]] = OrderedDict()
 
@@ -57,14 +52,8 @@ class Pictures:
             return Picture(self._by_frames(key, time_us), time_us, Kind.INSERTED, By.FRAMES)
         span = self.span(key)
         candidates = span.at(time_us)
-        if self.network is None:
-            return Picture(
-                with_colour(analytic_blend(candidates), span, candidates), time_us, Kind.INSERTED, By.INTEGRAL
-            )
-        from enhance.interpolate.network import fuse
-
-        light = fuse(self.network, candidates)
-        return Picture(with_colour(light, span, candidates), time_us, Kind.INSERTED, By.NETWORK)
+        light, by, _ = fused(self.keys.network, candidates)
+        return Picture(with_colour(light, span, candidates), time_us, Kind.INSERTED, by)
 
     def span(self, key: int) -> Span:
         """Prepare the span from a key to the next, which the events must cover."""
@@ -73,7 +62,8 @@ class Pictures:
     def _span(self, key: int) -> Span:
         interval = (self.keys.times_us[key], self.keys.times_us[key + 1])
         left, right = self.keys.picture(key).image, self.keys.picture(key + 1).image
-        return Span(left, right, interval, self.keys.span_events(key), self.keys.rig.contrast)
+        exposed = np.stack([self.keys.exposed(key), self.keys.exposed(key + 1)])
+        return Span(left, right, interval, self.keys.span_events(key), self.keys.rig.contrast, exposed)
 
     def _by_frames(self, key: int, time_us: int) -> Image:
         """Move the keys by their own flow: no event tells anything here."""

@@ -39,8 +39,9 @@ def preview(settings: ClipSettings, folder: Path) -> list[Path]:
         first = _busiest(recording) if count > 1 else 0
         near = range(max(0, first - KEYS // 2), min(count, first + KEYS // 2))
         rig = measured_rig(recording, near, settings)
-        keys = Keys(recording.frames, near, events_on_frames(recording, rig), rig)
-        pictures = Pictures(keys, load_fusion(settings) if count > 1 else None)
+        network = load_fusion(settings) if count > 1 else None
+        keys = Keys(recording.frames, near, events_on_frames(recording, rig), rig, network)
+        pictures = Pictures(keys)
         light = recording.frames.light
         start = keys.times_us[0]
         key = first - near.start

@@ -25,15 +25,15 @@ from enhance.light import decode, encode
 
 #: Largest change the residual may make, in signal (sRGB-encoded light, 0 to 1).
 RESIDUAL = 0.1
-#: Channels at 1/2, 1/4 and 1/8 of the size: 19.3 kMAC an output pixel in all, within the 20 a CPU night affords.
-WIDTHS = (32, 48, 64)
-#: Six candidates, the analytic blend, two event counts, two event sums, mismatch, two cues of motion, time.
-INPUTS = len(NAMES) + 9
+#: Channels at 1/2, 1/4 and 1/8 of the size: 19.8 kMAC an output pixel in all, within the 20 a CPU night affords.
+WIDTHS = (32, 48, 56)
 CANDIDATES = len(NAMES)
-#: What is mixed: the candidates, the analytic blend, the carried pair weighed by events.
+#: What is mixed: the candidates, the carried pair weighed by events, and what the network starts from: the analytic
+#: blend, or for a key its own double integral.
 MEMBERS = CANDIDATES + 2
-#: Events that count as much as all of the time does when the carried pair is weighed.
-TIME_EVENTS = 4
+#: Members, event counts of both sides and of both exposures, mismatch, two cues of motion, time, whether it is a key.
+INPUTS = MEMBERS + 9
+START = MEMBERS - 1
 #: Sides are padded to a multiple of this.
 BLOCK = 8
 
@@ -48,22 +48,22 @@ def network_inputs(candidates: Candidates) -> NDArray[np.float32]:
     Returns
     -------
     ndarray of float32, shape (INPUTS, H, W)
-        The candidates and the analytic blend as signal (sRGB-encoded, so that dark and light weigh as they look), then
-        the cues scaled to about one.
+        The members as signal (sRGB-encoded, so that dark and light weigh as they look), then the cues scaled to about
+        one.
     """
-    blend = analytic_blend(candidates)
-    signal = encode("srgb", np.concatenate([candidates.stack, blend[None]]))
+    start = analytic_blend(candidates)
+    signal = encode("srgb", np.concatenate([candidates.stack, candidates.carried[None], start[None]]))
     # A runaway event sum must not drown everything else.
     signal = np.clip(signal, -0.1, 1.3)
-    time = np.full((1, *blend.shape), candidates.weight, np.float32)
+    told = (candidates.weight, float(candidates.key is not None))
     return np.concatenate(
         [
             signal,
             np.log1p(candidates.counts) / 2,
-            np.clip(candidates.change, -2, 2),
+            np.log1p(candidates.exposed) / 2,
             np.clip(candidates.mismatch, -2, 2)[None],
             _motion_cues(candidates),
-            time,
+            *(np.full((1, *start.shape), value, np.float32) for value in told),
         ]
     ).astype(np.float32)
 
@@ -86,7 +86,7 @@ class FusionNetwork(nn.Module):
     def __init__(self) -> None:
         super().__init__()
         a, b, c = WIDTHS
-        self.enter = nn.Conv2d(4 * (INPUTS + 1), a, 3, padding=1)
+        self.enter = nn.Conv2d(4 * INPUTS, a, 3, padding=1)
         self.at_half = nn.ModuleList([nn.Conv2d(a, a, 3, padding=1) for _ in range(2)])
         self.to_quarter = nn.Conv2d(a, b, 3, stride=2, padding=1)
         self.at_quarter = nn.Conv2d(b, b, 3, padding=1)
@@ -97,10 +97,10 @@ class FusionNetwork(nn.Module):
         self.up_half = nn.Conv2d(b, a, 1)
         self.back_half = nn.Conv2d(a, a, 3, padding=1)
         self.leave = nn.Conv2d(a, 4 * (MEMBERS + 1), 3, padding=1)
-        # Training starts from the analytic blend: no residual, and nearly all weight on the blend's own channel.
+        # Training begins with no residual and nearly all weight on what the network starts from.
         nn.init.zeros_(self.leave.weight)
         bias = torch.zeros(4 * (MEMBERS + 1))
-        bias[4 * CANDIDATES : 4 * (CANDIDATES + 1)] = 3.0
+        bias[4 * START : 4 * (START + 1)] = 3.0
         self.leave.bias = nn.Parameter(bias)
 
     def forward(self, inputs: Tensor) -> tuple[Tensor, Tensor]:
@@ -111,41 +111,28 @@ class FusionNetwork(nn.Module):
         picture : Tensor, shape (N, 1, H, W)
             Signal.
         weights : Tensor, shape (N, MEMBERS, H, W)
-            Sum 1; the last two are the analytic blend's and the carried pair's.
+            Sum 1.
         """
-        members = torch.cat([inputs[:, : CANDIDATES + 1], carried_by_events(inputs)], dim=1)  # (N, 8, H, W)
-        # Disagreement is what matters: every member but the blend enters as its difference from it.
-        blend = members[:, CANDIDATES : CANDIDATES + 1]  # (N, 1, H, W)
-        apart = 4 * (members - blend)
-        apart[:, CANDIDATES] = blend[:, 0]
-        x = torch.cat([apart, inputs[:, CANDIDATES + 1 :]], dim=1)  # (N, INPUTS + 1, H, W)
+        members = inputs[:, :MEMBERS]  # (N, 9, H, W)
+        # Disagreement is what matters: every member but the last enters as its difference from that.
+        start = members[:, START:]  # (N, 1, H, W)
+        x = torch.cat([4 * (members[:, :START] - start), inputs[:, START:]], dim=1)  # (N, INPUTS, H, W)
         x = functional.relu(self.enter(functional.pixel_unshuffle(x, 2)))  # (N, 32, H/2, W/2)
         for layer in self.at_half:
             x = functional.relu(layer(x))
         half = x
         quarter = functional.relu(self.at_quarter(functional.relu(self.to_quarter(half))))  # (N, 48, H/4, W/4)
-        x = functional.relu(self.to_eighth(quarter))  # (N, 64, H/8, W/8)
+        x = functional.relu(self.to_eighth(quarter))  # (N, 56, H/8, W/8)
         for layer in self.at_eighth:
             x = x + functional.relu(layer(x))
         x = quarter + functional.interpolate(self.up_quarter(x), scale_factor=2.0)  # (N, 48, H/4, W/4)
         x = functional.relu(self.back_quarter(x))
         x = half + functional.interpolate(self.up_half(x), scale_factor=2.0)  # (N, 32, H/2, W/2)
         x = functional.relu(self.back_half(x))
-        x = functional.pixel_shuffle(self.leave(x), 2)  # (N, 9, H, W)
-        weights = x[:, :MEMBERS].softmax(dim=1)  # (N, 8, H, W)
+        x = functional.pixel_shuffle(self.leave(x), 2)  # (N, 10, H, W)
+        weights = x[:, :MEMBERS].softmax(dim=1)  # (N, 9, H, W)
         residual = RESIDUAL * torch.tanh(x[:, MEMBERS:])  # (N, 1, H, W)
         return (weights * members).sum(dim=1, keepdim=True) + residual, weights
-
-
-def carried_by_events(inputs: Tensor) -> Tensor:
-    """Blend the carried pair by where in the span its events lie: (N, INPUTS, H, W) to (N, 1, H, W).
-
-    The error of a threshold grows with the events that were counted, not with time: a key is right up to the first.
-    """
-    before, after = torch.expm1(2 * inputs[:, CANDIDATES + 1 : CANDIDATES + 3]).split(1, dim=1)  # (N, 1, H, W) each
-    # Where there are few events, time decides: f = (N_before + k w) / (N_before + N_after + k)
-    share = (before + TIME_EVENTS * inputs[:, -1:]) / (before + after + TIME_EVENTS)
-    return (1 - share) * inputs[:, :1] + share * inputs[:, 1:2]
 
 
 def macs_per_pixel(network: nn.Module | None = None) -> float:
@@ -202,7 +189,7 @@ def load_network(path: Path) -> FusionNetwork:
 
 
 @torch.inference_mode()
-def fuse(network: FusionNetwork, candidates: Candidates) -> NDArray[np.float32]:
+def fuse(network: FusionNetwork, candidates: Candidates) -> tuple[NDArray[np.float32], NDArray[np.float32]]:
     """Make one picture.
 
     Parameters
@@ -212,11 +199,17 @@ def fuse(network: FusionNetwork, candidates: Candidates) -> NDArray[np.float32]:
 
     Returns
     -------
-    ndarray of float32, shape (H, W)
+    picture : ndarray of float32, shape (H, W)
         Luma, linear light.
+    spread : ndarray of float32, shape (H, W)
+        How far the members of the mixture are apart: their variance under its weights, in signal squared.
     """
     inputs = torch.from_numpy(network_inputs(candidates))[None]  # (1, INPUTS, H, W)
     height, width = inputs.shape[-2:]
     padded = functional.pad(inputs, (0, -width % BLOCK, 0, -height % BLOCK), mode="replicate")
-    picture, _ = network(padded)
-    return decode("srgb", picture[0, 0, :height, :width].numpy())
+    picture, weights = network(padded)
+    members = padded[:, :MEMBERS]
+    mean = (weights * members).sum(dim=1, keepdim=True)
+    spread = (weights * (members - mean) ** 2).sum(dim=1)
+    light = decode("srgb", picture[0, 0, :height, :width].numpy())
+    return light, spread[0, :height, :width].numpy()

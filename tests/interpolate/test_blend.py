@@ -6,7 +6,7 @@ import numpy as np
 import pytest
 
 from enhance.interpolate import Span, analytic_blend, with_colour
-from enhance.interpolate.blend import WARPED, carried_blend, fit_of_warps
+from enhance.interpolate.weighing import carried_by_events, weigh_warps
 from enhance.light import luma
 from enhance.recording import Contrast, Events
 from enhance.simulate import Camera, EventSensor, make_scene, simulate
@@ -37,27 +37,43 @@ def test_the_blend_is_better_than_carrying_alone_on_parts_that_cross(seed):
     for time_us in (8_000, 16_500, 25_000):
         candidates, truth = span.at(time_us), simulated.truth(time_us)
         picture = analytic_blend(candidates)
-        assert mse(picture, truth) < 0.9 * mse(carried_blend(candidates, candidates.stack), truth)
+        assert mse(picture, truth) < 0.8 * mse(candidates.carried, truth)
         # and than the frames alone
         w = candidates.weight
         assert mse(picture, truth) < 0.5 * mse((1 - w) * span.left + w * span.right, truth)
 
 
 def test_weights_of_the_warps_are_shares(colourful):
-    weights, share = fit_of_warps(colourful[0].at(12_000))
-    assert weights.shape == (4, 96, 128)
+    candidates = colourful[0].at(12_000)
+    weights, share = weigh_warps(candidates.stack[2:], candidates.carried, candidates.stack[:2])
+    assert weights.shape == (5, 96, 128)
     assert weights.dtype == share.dtype == np.float32
     assert weights.min() >= 0
     np.testing.assert_allclose(weights.sum(axis=0), 1, rtol=1e-5)
-    assert 0 < share.min() <= share.max() <= WARPED
+    assert 0 < share.min() <= share.max() <= 1
 
 
 def test_a_warp_that_does_not_fit_gets_little_weight(colourful):
     candidates = colourful[0].at(12_000)
     stack = candidates.stack.copy()
     stack[3] += 0.3
-    weights, _ = fit_of_warps(replace(candidates, stack=stack))
+    weights, _ = weigh_warps(stack[2:], candidates.carried, stack[:2])
     assert weights[1].mean() < 0.05
+
+
+def test_the_carried_pair_is_weighed_by_events_and_without_them_by_time():
+    pair = np.stack([np.full((4, 5), 0.2), np.full((4, 5), 0.6)]).astype(np.float32)
+    none, many = np.zeros((2, 4, 5), np.float32), np.zeros((2, 4, 5), np.float32)
+    many[0] = 1e6
+    np.testing.assert_allclose(carried_by_events(pair, none, 0.25), 0.3, rtol=1e-6)
+    # all of the span's events lie before the instant: the right key is as it was
+    np.testing.assert_allclose(carried_by_events(pair, many, 0.25), 0.6, rtol=1e-5)
+
+
+def test_a_key_is_not_blended(colourful):
+    candidates = colourful[0].at(12_000)
+    key = np.full(candidates.mismatch.shape, 0.3, np.float32)
+    assert analytic_blend(replace(candidates, key=key)) is key
 
 
 @pytest.mark.parametrize("value", [-0.01, 0.0, 0.4, 1.3])

@@ -2,6 +2,7 @@
 
 import hashlib
 import json
+from dataclasses import replace
 from pathlib import Path
 
 import numpy as np
@@ -12,11 +13,11 @@ from safetensors.torch import save
 from enhance.errors import ModelError
 from enhance.interpolate.candidates import Candidates
 from enhance.interpolate.network import (
-    CANDIDATES,
     INPUTS,
+    MEMBERS,
     RESIDUAL,
+    START,
     FusionNetwork,
-    carried_by_events,
     fuse,
     load_network,
     macs_per_pixel,
@@ -42,7 +43,15 @@ def candidates(height: int = 45, width: int = 62, seed: int = 3) -> Candidates:
 
     flows = (some(height, width, 2), some(height, width, 2))
     counts = np.floor(5 * some(2, height, width))
-    return Candidates(some(6, height, width), 0.3, counts, some(2, height, width), some(height, width), flows)
+    return Candidates(
+        stack=some(7, height, width),
+        carried=some(height, width),
+        weight=0.3,
+        counts=counts,
+        exposed=np.floor(9 * some(2, height, width)),
+        mismatch=some(height, width),
+        flows=flows,
+    )
 
 
 def test_the_network_keeps_its_budget() -> None:
@@ -69,8 +78,8 @@ def test_macs_a_pixel_are_those_that_run() -> None:
 
 def test_a_picture_lies_within_its_candidates_and_the_residual() -> None:
     known = candidates()
-    picture = encode("srgb", fuse(random_network(1), known))
-    members = network_inputs(known)[: CANDIDATES + 1]
+    picture = encode("srgb", fuse(random_network(1), known)[0])
+    members = network_inputs(known)[:MEMBERS]
     assert (picture <= members.max(axis=0) + RESIDUAL + 1e-5).all()
     assert (picture >= members.min(axis=0) - RESIDUAL - 1e-5).all()
     assert picture.shape == known.mismatch.shape
@@ -86,33 +95,39 @@ def test_weights_sum_to_one_and_none_is_negative() -> None:
 
 def test_fusing_twice_gives_the_same_bytes() -> None:
     network = random_network(4)
-    assert fuse(network, candidates()).tobytes() == fuse(network, candidates()).tobytes()
+    one, other = (fuse(network, candidates())[0] for _ in range(2))
+    assert one.tobytes() == other.tobytes()
+
+
+def test_first_weights_give_back_what_the_network_starts_from() -> None:
+    torch.manual_seed(1)
+    key = np.full((45, 62), 0.3, np.float32)
+    known = replace(candidates(), key=key)
+    np.testing.assert_array_equal(network_inputs(known)[START], encode("srgb", key))
+    fresh, _ = fuse(FusionNetwork().eval(), known)
+    # a weight of exp(3) against eight of exp(0)
+    share = np.exp(3) / (np.exp(3) + MEMBERS - 1)
+    others = network_inputs(known)[:START].mean(axis=0)
+    expected = share * encode("srgb", key) + (1 - share) * others
+    np.testing.assert_allclose(encode("srgb", fresh), expected, atol=1e-5)
+
+
+def test_members_that_agree_have_no_spread() -> None:
+    known = candidates()
+    same = replace(known, stack=np.broadcast_to(known.carried, known.stack.shape))
+    assert fuse(random_network(1), same)[1].max() < 1e-3 * fuse(random_network(1), known)[1].mean()
 
 
 def test_steady_motion_fits_itself_and_hidden_motion_does_not() -> None:
     known = candidates()
     steady = np.full((*known.mismatch.shape, 2), 4.0, np.float32)
-    fitting = Candidates(known.stack, 0.25, known.counts, known.change, known.mismatch, (-0.25 * steady, 0.75 * steady))
-    cues = network_inputs(fitting)[-3:-1]
+    fitting = replace(known, weight=0.25, flows=(-0.25 * steady, 0.75 * steady))
+    cues = network_inputs(fitting)[-4:-2]
     np.testing.assert_allclose(cues[0], 0, atol=1e-6)
     # by hand: ln(1 + 4 sqrt 2) / 2
     np.testing.assert_allclose(cues[1], np.log1p(4 * np.sqrt(2)) / 2, rtol=1e-5)
-    lost = Candidates(known.stack, 0.25, known.counts, known.change, known.mismatch, (steady, steady))
-    assert network_inputs(lost)[-3].min() > 1
-
-
-def test_the_carried_pair_is_weighed_by_events_and_without_them_by_time() -> None:
-    known = candidates()
-    nothing = np.zeros_like(known.counts)
-    many = nothing.copy()
-    many[0] = 1000
-    for counts, share in ((nothing, known.weight), (many, 1.0)):
-        inputs = network_inputs(
-            Candidates(known.stack, known.weight, counts, known.change, known.mismatch, known.flows)
-        )
-        pair = carried_by_events(torch.from_numpy(inputs)[None])[0, 0].numpy()
-        # all events before the instant: the right key tells all
-        np.testing.assert_allclose(pair, (1 - share) * inputs[0] + share * inputs[1], atol=4e-3)
+    lost = replace(known, weight=0.25, flows=(steady, steady))
+    assert network_inputs(lost)[-4].min() > 1
 
 
 def written(folder: Path, data: bytes, sha256: str | None = None) -> Path:
@@ -125,7 +140,7 @@ def written(folder: Path, data: bytes, sha256: str | None = None) -> Path:
 def test_weights_come_back_from_their_file(tmp_path: Path) -> None:
     network = random_network(5)
     path = written(tmp_path, save(network.state_dict()))
-    assert fuse(load_network(path), candidates()).tobytes() == fuse(network, candidates()).tobytes()
+    assert fuse(load_network(path), candidates())[0].tobytes() == fuse(network, candidates())[0].tobytes()
 
 
 def test_a_damaged_file_is_told_by_both_checksums_and_the_way_round(tmp_path: Path) -> None:
