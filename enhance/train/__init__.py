@@ -11,7 +11,7 @@ from enhance.errors import JobError
 logger = logging.getLogger(__name__)
 
 #: Held-out recordings: three of every kind of scene.
-HELD_OUT = 27
+HELD_OUT = 36
 #: Steps that are timed, and steps before them, to tell how many fit into the minutes asked for.
 TIMED, BEFORE = 12, 3
 
@@ -25,6 +25,7 @@ def run(
     recordings: int,
     seed: int,
     resume: bool,
+    ablations: float = 0.0,
     processes: int = 2,
     progress: Callable[[int, int, str], None] | None = None,
 ) -> Path:
@@ -46,6 +47,8 @@ def run(
         Of the recordings and the weights.
     resume : bool
         Take up the training that stands in the folder.
+    ablations : float
+        Minutes to fit each of the networks that lack something, for the card; none of them if 0.
     processes : int
         That render. Any number leaves the same recordings.
     progress : callable, optional
@@ -67,6 +70,7 @@ def run(
     from enhance.train.card import write_card
     from enhance.train.data import load_shard, make_shards, shard_path
     from enhance.train.fit import STATE, Crops, Settings, Training, fit, load_state
+    from enhance.train.lacking import measure_ablations
 
     stands = (folder / STATE).is_file()
     if stands and not resume:
@@ -88,7 +92,11 @@ def run(
         training = Training.begin(Settings(_steps_within(60 * minutes, crops), seed))
         logger.info("%d steps of about %.0f ms", training.settings.steps, 6e4 * minutes / training.settings.steps)
     fit(training, crops, held_out, folder, progress)
-    return write_card(training, held_out, recordings, minutes, folder)
+    lacking = {}
+    if ablations:
+        steps = max(1, round(training.settings.steps * ablations / minutes))
+        lacking = measure_ablations(folder / "ablations", crops, held_out, steps, seed, progress)
+    return write_card(training, held_out, recordings, minutes, folder, lacking)
 
 
 def _steps_within(seconds: float, crops: object) -> int:

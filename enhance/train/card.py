@@ -8,10 +8,11 @@ from collections.abc import Mapping, Sequence
 from pathlib import Path
 from typing import Any
 
+import numpy as np
 from torch import nn
 
 from enhance import __version__
-from enhance.interpolate.network import CANDIDATES, INPUTS, RESIDUAL, FusionNetwork, load_network, macs_per_pixel
+from enhance.interpolate.network import INPUTS, MEMBERS, RESIDUAL, FusionNetwork, load_network, macs_per_pixel
 from enhance.simulate.benchmark import FIRST_SEED
 from enhance.train import fit, recipe, score
 from enhance.train.data import CROP, CROPS, INSTANTS, Shard
@@ -22,9 +23,10 @@ WEIGHTS = "fusion.safetensors"
 DATA = (
     "Recordings of the package's own simulator, all kinds of scene in turn, textures of the training half: procedural "
     "ones and free photographs. 192 to 256 x 160 to 192 pixels, 5 or 6 keys, 0.5 to 60 px of motion from key to key, "
-    "exposures of 1 to 90 % of that time with up to 25 px of blur, 4 to 120 keys a second; thresholds 0.1 to 0.4 a "
-    "polarity, mismatch to 8 %, noise to 5 Hz a pixel, refractory time to 300 us, leak to 0.2 Hz, latency spread 5 to "
-    "300 us, hot pixels; full well 1000 to 30 000 electrons, read noise to 12, 8 to 12 bits, linear or sRGB.",
+    f"exposures of 0.1 to 90 % of that time with up to {recipe.MOST_BLUR_PX:g} px of blur, 2 to 120 keys a second; "
+    f"thresholds 0.1 to 0.4 a polarity, mismatch to 8 %, noise to {recipe.MOST_NOISE_HZ:g} Hz a pixel, refractory time "
+    "to 300 us, leak to 0.2 Hz, latency spread 5 to 300 us, hot pixels; full well 1000 to 30 000 electrons, read noise "
+    "to 12, 8 to 12 bits, linear or sRGB.",
     f"The rig told is disturbed: thresholds by -5 to +20 % and 5 % a polarity, the clock by 2 % of the exposure or "
     f"300 us, any ramp, hot pixels partly unknown; {recipe.BADLY_RIGGED:.0%} of the rigs are off by 30 % and 5 %.",
     f"{recipe.VIOLATED:.0%} of the recordings break the event model in one way or two: events lost where they come "
@@ -43,7 +45,12 @@ LIMITS = (
 
 
 def write_card(
-    training: fit.Training, held_out: Sequence[Shard], recordings: int, minutes: float, folder: Path, note: str = ""
+    training: fit.Training,
+    held_out: Sequence[Shard],
+    recordings: int,
+    minutes: float,
+    folder: Path,
+    ablations: Mapping[str, Any] | None = None,
 ) -> Path:
     """Write the best weights with their card, for machines and for readers.
 
@@ -58,8 +65,8 @@ def write_card(
         Asked for.
     folder : Path
         Holds the best weights; gets ``fusion.safetensors``, ``fusion.json``, ``fusion.md``.
-    note : str
-        What else is to be known of the data.
+    ablations : mapping, optional
+        As `measure_ablations` of this package gives them.
 
     Returns
     -------
@@ -74,8 +81,7 @@ def write_card(
     _write_json({"sha256": hashlib.sha256(data).hexdigest()}, path)
     network = load_network(path)
     card = describe(network, training, held_out, recordings, minutes) | {"sha256": hashlib.sha256(data).hexdigest()}
-    if note:
-        card["data"]["recipe"].append(note)
+    card["ablations"] = dict(ablations or {})
     _write_json(card, path)
     with whole_file(path.with_suffix(".md")) as partial:
         partial.write_text(readable(card), encoding="utf-8")
@@ -103,7 +109,7 @@ def describe(
     dict
         What JSON can hold.
     """
-    by_kind = score.score(network, held_out)
+    by_kind, keys = score.score(network, held_out), score.score(network, held_out, keys=True)
     settings = training.settings
     return {
         "name": "fusion",
@@ -111,7 +117,7 @@ def describe(
         "architecture": {
             "layers": _layers(network),
             "inputs": INPUTS,
-            "candidates": CANDIDATES,
+            "members": MEMBERS,
             "residual": RESIDUAL,
             "parameters": sum(weight.numel() for weight in network.parameters()),
             "macs_per_pixel": round(macs_per_pixel(network)),
@@ -125,7 +131,7 @@ def describe(
         },
         "training": {
             "steps": training.step,
-            "kept_step": max(training.curve, key=lambda row: row["held_out_network"])["step"],
+            "kept_step": max(training.curve, key=lambda row: np.nansum([row["held_out_network"], row["keys_network"]]))["step"],
             "batch": settings.batch,
             "rate": fit.RATE,
             "weight_decay": fit.WEIGHT_DECAY,
@@ -138,6 +144,8 @@ def describe(
             "definition": "Mean PSNR in dB of whole pictures against the sharp truth, in the frames' own curve",
             "by_kind": _rounded(by_kind),
             "mean": _rounded({"all kinds": score.mean_over_groups(by_kind)})["all kinds"],
+            "keys_by_kind": _rounded(keys),
+            "keys_mean": _rounded({"all kinds": score.mean_over_groups(keys)})["all kinds"],
             "by_model": _rounded(score.score(network, held_out, _by_model)),
             "weights": {name: round(value, 3) for name, value in score.weigh(network, held_out).items()},
             "at_rest": {name: round(value, 2) for name, value in score.at_rest(network, held_out).items()},
@@ -167,20 +175,21 @@ def _rounded(table: Mapping[str, Mapping[str, float]]) -> score.Table:
 def readable(card: Mapping[str, Any]) -> str:
     """Turn a card's facts into Markdown."""
     net, data, fitted, held = (card[name] for name in ("architecture", "data", "training", "held_out"))
-    rows = {**held["by_kind"], "**all kinds**": held["mean"], **held["by_model"]}
+    inserted = {**held["by_kind"], "**all kinds**": held["mean"], **held["by_model"]}
+    keys = {**held["keys_by_kind"], "**all kinds**": held["keys_mean"]}
     rest = held["at_rest"]
     weights = ", ".join(f"{name} {value:.2f}" for name, value in held["weights"].items())
     lines = [
         "# The fusion network",
         "",
-        "Weighs the candidates of an inserted picture pixel by pixel and adds a bounded residual.",
+        "Weighs the candidates of an inserted picture, or of a key, pixel by pixel and adds a bounded residual.",
         f"`{WEIGHTS}`, sha256 `{card['sha256']}`, {card['made_by']}. Drawn from `fusion.json`.",
         "",
         "## Architecture",
         "",
         f"{net['parameters']} parameters, {net['macs_per_pixel'] / 1000:.1f} thousand multiply-accumulates an output "
-        f"pixel; {net['inputs']} input channels, {net['candidates']} candidates and their analytic blend; residual at "
-        f"most {net['residual']:g} of full scale.",
+        f"pixel; {net['inputs']} input channels, {net['members']} of them members of the mixture; residual at most "
+        f"{net['residual']:g} of full scale.",
         "",
         "| layer | weights | stride |",
         "|---|---|---|",
@@ -203,16 +212,19 @@ def readable(card: Mapping[str, Any]) -> str:
         "",
         "## Held-out recordings",
         "",
-        f"{held['definition']}.",
+        f"{held['definition']}. Inserted pictures:",
         "",
-        f"| scenes | {' | '.join(name.replace('_', ' ') for name in score.SCORED)} |",
-        f"|---|{'---|' * len(score.SCORED)}",
-        *(f"| {name} | {' | '.join(f'{row[one]:.2f}' for one in score.SCORED)} |" for name, row in rows.items()),
+        *_table(inserted),
         "",
-        "*Without residual*: the mixture alone. *Blend*: the analytic blend, which stands in where no network is used. "
-        "*Carried*: both keys carried along the events and blended by time. *Best single*: the best candidate of each "
-        "picture, chosen with the truth in hand.",
+        "Keys:",
         "",
+        *_table(keys),
+        "",
+        "*Without residual*: the mixture alone. *Start*: what stands in where no network is used: the analytic blend; "
+        "for a key, its own double integral. *Carried*: both neighbours carried along the events and blended by time. "
+        "*Best single*: the best candidate of each picture, chosen with the truth in hand.",
+        "",
+        *_ablations(card["ablations"]),
         f"Mean weights: {weights}.",
         "",
         f"Where nothing happens, error in 8-bit steps of signal: network {rest['network']:.2f}, keys blended by time "
@@ -223,3 +235,26 @@ def readable(card: Mapping[str, Any]) -> str:
         *(f"- {line}" for line in card["limits"]),
     ]
     return "\n".join(lines) + "\n"
+
+
+def _table(rows: Mapping[str, Mapping[str, float]]) -> list[str]:
+    return [
+        f"| scenes | {' | '.join(name.replace('_', ' ') for name in score.SCORED)} |",
+        f"|---|{'---|' * len(score.SCORED)}",
+        *(f"| {name} | {' | '.join(f'{row[one]:.2f}' for one in score.SCORED)} |" for name, row in rows.items()),
+    ]
+
+
+def _ablations(found: Mapping[str, Any]) -> list[str]:
+    if not found:
+        return []
+    return [
+        "## Ablations",
+        "",
+        f"Each fitted alone, {found['steps']} steps; held-out recordings, dB (without a network: the column *start*).",
+        "",
+        "| without | inserted | keys |",
+        "|---|---|---|",
+        *(f"| {name} | {row['inserted']:.2f} | {row['keys']:.2f} |" for name, row in found["networks"].items()),
+        "",
+    ]

@@ -9,7 +9,7 @@ from __future__ import annotations
 import json
 import logging
 import zipfile
-from collections.abc import Sequence
+from collections.abc import Iterator, Sequence
 from concurrent.futures import ProcessPoolExecutor
 from dataclasses import asdict, dataclass
 from functools import partial
@@ -22,6 +22,7 @@ from numpy.typing import NDArray
 
 from enhance.clip.keys import Keys
 from enhance.clip.pictures import Pictures
+from enhance.interpolate import Candidates
 from enhance.interpolate.network import network_inputs
 from enhance.rig import RiggedEvents
 from enhance.train.recipe import Rng, draw_recipe
@@ -32,19 +33,19 @@ logger = logging.getLogger(__name__)
 
 #: Side of a training crop, pixels.
 CROP = 96
-#: Instants of a recording, crops of each, and the share of those that lie anywhere, not at events: rest must stay rest.
-INSTANTS, CROPS, ANYWHERE = 8, 3, 0.25
-#: Instants of a held-out recording.
-HELD_OUT_INSTANTS = 4
+#: Instants between keys and keys of a recording that are used, and those of a held-out one.
+INSTANTS, KEYS, HELD_OUT_INSTANTS, HELD_OUT_KEYS = 6, 2, 4, 2
+#: Crops of each, and the share of those that lie anywhere, not at events: rest must stay rest.
+CROPS, ANYWHERE = 3, 0.25
 #: Changes whenever files made before must not be used any more.
-VERSION = 1
+VERSION = 2
 
 Half = NDArray[np.float16]
 
 
 @dataclass(frozen=True)
 class Shard:
-    """Instants of one recording.
+    """Instants of one recording, those between keys first, then keys.
 
     Parameters
     ----------
@@ -78,10 +79,10 @@ def make_shard(seed: int, index: int, held_out: bool = False) -> Shard:
     sample = record(recipe, rng)
     frames = sample.recording.frames
     events = RiggedEvents(sample.recording.events, sample.rig, recipe.size)
-    pictures = Pictures(Keys(frames, range(len(frames)), events, sample.rig), None)
+    pictures = Pictures(Keys(frames, range(len(frames)), events, sample.rig))
     inputs, truth = [], []
-    for time_us, key in _instants(pictures.keys, HELD_OUT_INSTANTS if held_out else INSTANTS, rng):
-        known = network_inputs(pictures.span(key).at(time_us)).astype(np.float16)
+    for time_us, key, candidates in _known(pictures, held_out, rng):
+        known = network_inputs(candidates).astype(np.float16)
         sharp = signal(sample.truth(time_us)).astype(np.float16)[None]
         if held_out:
             inputs.append(known)
@@ -91,6 +92,18 @@ def make_shard(seed: int, index: int, held_out: bool = False) -> Shard:
             inputs.append(known[:, row : row + CROP, column : column + CROP])
             truth.append(sharp[:, row : row + CROP, column : column + CROP])
     return Shard(np.stack(inputs), np.stack(truth), _described(sample))
+
+
+def _known(pictures: Pictures, held_out: bool, rng: Rng) -> Iterator[tuple[int, int, Candidates]]:
+    """Make candidates of instants between keys, then of keys: time, the key before (or a key near) and candidates."""
+    keys = pictures.keys
+    for time_us, key in _instants(keys, HELD_OUT_INSTANTS if held_out else INSTANTS, rng):
+        yield time_us, key, pictures.span(key).at(time_us)
+    for key in rng.choice(len(keys), HELD_OUT_KEYS if held_out else KEYS, replace=False).tolist():
+        candidates = keys.candidates(key)
+        # Without a neighbour that events tell about there is nothing to refine a key by.
+        if candidates is not None:
+            yield keys.times_us[key], min(key, len(keys) - 2), candidates
 
 
 def _instants(keys: Keys, count: int, rng: Rng) -> list[tuple[int, int]]:

@@ -26,6 +26,7 @@ from torch import Tensor
 
 from enhance.errors import ModelError
 from enhance.interpolate.network import FusionNetwork
+from enhance.train.ablation import ablated, mixture
 from enhance.train.data import Shard
 from enhance.train.score import mean_over_groups, score
 from enhance.train.symmetry import turned
@@ -45,7 +46,7 @@ AVERAGED = 0.998
 #: Gradients longer than this are shortened: one crop with a runaway event sum must not undo a round.
 LONGEST_GRADIENT = 1.0
 STATE, CURVE, BEST = "state.safetensors", "curve.csv", "best.safetensors"
-_COLUMNS = ("step", "seconds", "rate", "loss", "held_out_network", "held_out_blend")
+_COLUMNS = ("step", "seconds", "rate", "loss", "held_out_network", "held_out_start", "keys_network", "keys_start")
 
 Progress = Callable[[int, int, str], None]
 
@@ -65,6 +66,8 @@ class Settings:
     round_steps : int
         Steps between two saved states.
     threads : int
+    without : str
+        What is kept from the network, one of `enhance.train.ablation.ABLATIONS`; nothing if empty.
     """
 
     steps: int
@@ -72,6 +75,7 @@ class Settings:
     batch: int = 8
     round_steps: int = 400
     threads: int = 1
+    without: str = ""
 
 
 @dataclass
@@ -158,9 +162,12 @@ def train_step(training: Training, crops: Crops) -> float:
     """Take one step; gives its loss."""
     settings, step = training.settings, training.step
     inputs, truth = crops.batch(np.random.default_rng([settings.seed, step]), settings.batch)
+    inputs = ablated(inputs, settings.without)
     for group in training.optimizer.param_groups:
         group["lr"] = learning_rate(step, settings.steps)
-    picture, _ = training.network(inputs.contiguous(memory_format=torch.channels_last))
+    picture, weights = training.network(inputs.contiguous(memory_format=torch.channels_last))
+    if settings.without == "residual":
+        picture = mixture(inputs, weights)
     loss = fusion_loss(picture, truth)
     training.optimizer.zero_grad()
     loss.backward()
@@ -214,23 +221,27 @@ def fit(
 
 
 def _close_round(training: Training, loss: float, held_out: Sequence[Shard], folder: Path) -> None:
-    means = mean_over_groups(score(training.average, held_out))
+    inserted, keys = (mean_over_groups(score(training.average, held_out, keys=keys)) for keys in (False, True))
+    mean = float(np.nanmean([inserted["network"], keys["network"]]))
     training.curve.append(
         {
             "step": training.step,
             "seconds": round(training.seconds, 1),
             "rate": learning_rate(training.step - 1, training.settings.steps),
             "loss": loss,
-            "held_out_network": means["network"],
-            "held_out_blend": means["blend"],
+            "held_out_network": inserted["network"],
+            "held_out_start": inserted["start"],
+            "keys_network": keys["network"],
+            "keys_start": keys["start"],
         }
     )
     logger.info(
-        "step %d of %d: loss %.5f, held out %.2f dB (analytic blend %.2f)",
-        training.step, training.settings.steps, loss, means["network"], means["blend"],
+        "step %d of %d: loss %.5f, held out %.2f dB (analytic blend %.2f), keys %.2f dB (double integral %.2f)",
+        training.step, training.settings.steps, loss,
+        inserted["network"], inserted["start"], keys["network"], keys["start"],
     )  # fmt: skip
-    if means["network"] > training.best:
-        training.best = means["network"]
+    if mean > training.best:
+        training.best = mean
         save_weights(training.average, folder / BEST)
     save_state(training, folder)
     with whole_file(folder / CURVE) as path, open(path, "w", newline="", encoding="utf-8") as file:

@@ -26,7 +26,7 @@ KEYS = (5, 6)
 #: Most motion within one exposure, pixels.
 MOST_BLUR_PX = 30.0
 #: Share of recordings whose frames are practically sharp, and their exposure over the time between keys.
-SHARP, SHARP_SHARE = 0.15, (0.01, 0.05)
+SHARP, SHARP_SHARE = 0.1, (0.01, 0.05)
 #: Share of recordings without noise events; of the others most have far less than the most, which is 10 Hz a pixel.
 QUIET, MOST_NOISE_HZ = 0.1, 10.0
 #: Share of the time that bursts of lost events take up, and the length of a burst, milliseconds.
@@ -175,8 +175,8 @@ def draw_recipe(seed: int, index: int, held_out: bool = False) -> tuple[Recipe, 
     """
     rng = np.random.default_rng([seed, int(held_out), index])
     low, high = (HELD_OUT_SEED, FIRST_SEED) if held_out else (0, HELD_OUT_SEED)
-    # A camera whose every 2nd or 4th frame is used is a camera of that rate with a shorter share of exposure.
-    stride = int(rng.choice([1, 2, 4], p=[0.6, 0.25, 0.15]))
+    # A camera whose every 2nd, 4th or 8th frame is used is a camera of that rate with a shorter share of exposure.
+    stride = int(rng.choice([1, 2, 4, 8], p=[0.65, 0.18, 0.1, 0.07]))
     gap_px = _log_uniform(rng, 4.0, 60.0) if rng.random() < 0.92 else _log_uniform(rng, 0.5, 4.0)
     open_share = rng.uniform(*SHARP_SHARE) if rng.random() < SHARP else rng.uniform(0.05, 0.9)
     share = min(open_share / stride, MOST_BLUR_PX / gap_px)

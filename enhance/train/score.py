@@ -10,13 +10,14 @@ import torch
 from numpy.typing import NDArray
 
 from enhance.interpolate.candidates import NAMES
-from enhance.interpolate.network import CANDIDATES, FusionNetwork, carried_by_events
+from enhance.interpolate.network import MEMBERS, START, FusionNetwork
 from enhance.light import decode, encode
 from enhance.train.data import Shard
 
-#: What is scored: the network; its mixture without the residual; the analytic blend; the two carried candidates blended
-#: by time; the best single candidate of each picture, chosen with the truth in hand.
-SCORED = ("network", "without_residual", "blend", "carried", "best_single")
+#: What is scored: the network; its mixture without the residual; what it starts from (the analytic blend, or a key's
+#: own double integral); the two carried candidates blended by time; the best single candidate of each picture, chosen
+#: with the truth in hand.
+SCORED = ("network", "without_residual", "start", "carried", "best_single")
 #: A pixel is at rest if no event falls into the square of this side around it during the whole span.
 REST_PIXELS = 9
 
@@ -43,25 +44,26 @@ def pictures_of(network: FusionNetwork, inputs: Signal) -> tuple[dict[str, Signa
     known = torch.from_numpy(inputs)[None]
     fused, weighed = network(known)
     weights = weighed[0].numpy()
-    members = np.concatenate([inputs[: CANDIDATES + 1], carried_by_events(known)[0].numpy()])
-    time = inputs[-1]
+    time = inputs[-2]
     made = {
         "network": fused[0, 0].numpy(),
-        "without_residual": (weights * members).sum(axis=0),
-        "blend": inputs[CANDIDATES],
+        "without_residual": (weights * inputs[:MEMBERS]).sum(axis=0),
+        "start": inputs[START],
         "carried": (1 - time) * inputs[0] + time * inputs[1],
     }
     return made | dict(zip(NAMES, inputs, strict=False)), weights
 
 
-def score_shard(network: FusionNetwork, shard: Shard) -> dict[str, list[float]]:
-    """Score every picture of one recording.
+def score_shard(network: FusionNetwork, shard: Shard, keys: bool = False) -> dict[str, list[float]]:
+    """Score the inserted pictures of one recording, or its keys.
 
     Parameters
     ----------
     network : FusionNetwork
     shard : Shard
         Whole pictures.
+    keys : bool
+        Which of the two.
 
     Returns
     -------
@@ -71,6 +73,8 @@ def score_shard(network: FusionNetwork, shard: Shard) -> dict[str, list[float]]:
     found: dict[str, list[float]] = {name: [] for name in SCORED}
     curve = shard.recipe["read_as"]
     for inputs, truth in zip(shard.inputs, shard.truth, strict=True):
+        if bool(inputs[-1, 0, 0]) != keys:
+            continue
         sharp = _in_curve(curve, truth[0].astype(np.float32))
         made, _ = pictures_of(network, inputs.astype(np.float32))
         psnr = {name: _psnr(_in_curve(curve, picture), sharp) for name, picture in made.items()}
@@ -85,7 +89,9 @@ def kind_of(shard: Shard) -> str:
     return str(shard.recipe["kind"])
 
 
-def score(network: FusionNetwork, shards: Sequence[Shard], group: Callable[[Shard], str] = kind_of) -> Table:
+def score(
+    network: FusionNetwork, shards: Sequence[Shard], group: Callable[[Shard], str] = kind_of, keys: bool = False
+) -> Table:
     """Score many recordings, group by group.
 
     Parameters
@@ -94,6 +100,8 @@ def score(network: FusionNetwork, shards: Sequence[Shard], group: Callable[[Shar
     shards : sequence of Shard
     group : callable
         Name of a recording's group.
+    keys : bool
+        Score keys instead of inserted pictures.
 
     Returns
     -------
@@ -102,27 +110,31 @@ def score(network: FusionNetwork, shards: Sequence[Shard], group: Callable[[Shar
     """
     by_group: dict[str, dict[str, list[float]]] = {}
     for shard in shards:
-        for name, values in score_shard(network, shard).items():
+        for name, values in score_shard(network, shard, keys).items():
             by_group.setdefault(group(shard), {}).setdefault(name, []).extend(values)
     return {
         name: {scored: float(np.mean(found[scored])) for scored in SCORED} | {"pictures": float(len(found["network"]))}
         for name, found in sorted(by_group.items())
+        if found["network"]
     }
 
 
 def mean_over_groups(table: Mapping[str, Mapping[str, float]]) -> dict[str, float]:
-    """Average a table over its groups, each counting the same."""
+    """Average a table over its groups, each counting the same; not a number where there are none."""
+    if not table:
+        return dict.fromkeys(SCORED, float("nan"))
     return {name: float(np.mean([row[name] for row in table.values()])) for name in SCORED}
 
 
 def weigh(network: FusionNetwork, shards: Sequence[Shard]) -> dict[str, float]:
-    """Average the weight that each member of the mixture gets, over all pixels of all pictures."""
+    """Average the weight that each member of the mixture gets, over all pixels of all inserted pictures."""
     means = [
         pictures_of(network, inputs.astype(np.float32))[1].mean(axis=(1, 2))
         for shard in shards
         for inputs in shard.inputs
+        if not inputs[-1, 0, 0]
     ]
-    names = [*NAMES, "analytic blend", "carried pair weighed by events"]
+    names = [*NAMES, "carried pair weighed by events", "start"]
     return {name: float(weight) for name, weight in zip(names, np.mean(means, axis=0), strict=True)}
 
 
@@ -141,8 +153,10 @@ def at_rest(network: FusionNetwork, shards: Sequence[Shard]) -> dict[str, float]
     for shard in shards:
         for known, truth in zip(shard.inputs, shard.truth, strict=True):
             inputs, sharp = known.astype(np.float32), truth[0].astype(np.float32)
-            # logarithms of counts plus one stand after the candidates and the blend
-            seen = (inputs[CANDIDATES + 1 : CANDIDATES + 3].sum(axis=0) > 0).astype(np.uint8)
+            if inputs[-1, 0, 0]:
+                continue
+            # logarithms of counts plus one stand after the members
+            seen = (inputs[MEMBERS : MEMBERS + 2].sum(axis=0) > 0).astype(np.uint8)
             rest = cv2.dilate(seen, around) == 0
             made, _ = pictures_of(network, inputs)
             # Without events a carried key is the key.

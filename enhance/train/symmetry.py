@@ -6,14 +6,13 @@ import numpy as np
 import torch
 from torch import Tensor
 
-from enhance.interpolate.candidates import NAMES
-from enhance.interpolate.network import INPUTS
+from enhance.interpolate.network import CANDIDATES, INPUTS, MEMBERS
 
 #: Channels of `network_inputs` by what becomes of them when time runs backward.
-_SIGNAL = len(NAMES) + 1
-_COUNTS, _CHANGE, _MISMATCH, _TIME = _SIGNAL, _SIGNAL + 2, _SIGNAL + 4, INPUTS - 1
-#: Left and right change places in every pair; the blend, the mismatch and the cues of motion stay where they are.
-_PAIRED = [*range(0, len(NAMES), 2), _COUNTS, _CHANGE]
+_COUNTS, _EXPOSED, _MISMATCH, _TIME = MEMBERS, MEMBERS + 2, MEMBERS + 4, INPUTS - 2
+#: Left and right change places in every pair; what belongs to neither side stays where it is.
+_OWN = slice(4, 6)
+_PAIRED = [*range(0, CANDIDATES - 1, 2), _COUNTS, _EXPOSED]
 
 
 def _order() -> list[int]:
@@ -24,8 +23,8 @@ def _order() -> list[int]:
 
 
 ORDER = _order()
-#: What was gained toward the right key is lost toward the left one.
-SIGN = [-1.0 if _CHANGE <= channel <= _MISMATCH else 1.0 for channel in range(INPUTS)]
+#: By what the events miss the right key they miss the left one the other way.
+SIGN = [-1.0 if channel == _MISMATCH else 1.0 for channel in range(INPUTS)]
 
 
 def reversed_in_time(inputs: Tensor) -> Tensor:
@@ -40,6 +39,9 @@ def reversed_in_time(inputs: Tensor) -> Tensor:
     Tensor, same shape
     """
     back = inputs[..., ORDER, :, :] * torch.tensor(SIGN, dtype=inputs.dtype)[:, None, None]
+    # A key's two pictures of its own have no side.
+    key = inputs[..., -1:, :, :] > 0.5
+    back[..., _OWN, :, :] = torch.where(key, inputs[..., _OWN, :, :], back[..., _OWN, :, :])
     back[..., _TIME, :, :] = 1 - back[..., _TIME, :, :]
     return back
 

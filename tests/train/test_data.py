@@ -7,10 +7,10 @@ import pytest
 import torch
 
 from enhance.interpolate.candidates import Span
-from enhance.interpolate.network import CANDIDATES, INPUTS, network_inputs
+from enhance.interpolate.network import INPUTS, START, network_inputs
 from enhance.light import encode
 from enhance.recording import Contrast, Events
-from enhance.train.data import CROP, CROPS, INSTANTS, load_shard, make_shard, make_shards, shard_path
+from enhance.train.data import CROP, CROPS, INSTANTS, KEYS, load_shard, make_shard, make_shards, shard_path
 from enhance.train.symmetry import reversed_in_time, turned
 
 
@@ -41,10 +41,12 @@ def test_a_torn_file_is_made_again(shelf: Path, tmp_path: Path) -> None:
 
 def test_crops_hold_what_the_network_sees_and_the_truth_beside_it(shelf: Path) -> None:
     shard = load_shard(shard_path(shelf, 5, 5))
-    assert shard.inputs.shape == (INSTANTS * CROPS, INPUTS, CROP, CROP)
-    assert shard.truth.shape == (INSTANTS * CROPS, 1, CROP, CROP)
+    assert shard.inputs.shape == ((INSTANTS + KEYS) * CROPS, INPUTS, CROP, CROP)
+    assert shard.truth.shape == ((INSTANTS + KEYS) * CROPS, 1, CROP, CROP)
+    # keys come last and say so
+    assert shard.inputs[:, -1, 0, 0].tolist() == [0.0] * INSTANTS * CROPS + [1.0] * KEYS * CROPS
     assert np.isfinite(shard.inputs).all()
-    blend, truth = shard.inputs[:, CANDIDATES].astype(np.float32), shard.truth[:, 0].astype(np.float32)
+    blend, truth = shard.inputs[:, START].astype(np.float32), shard.truth[:, 0].astype(np.float32)
     # The truth belongs to the picture: the blend is nearer to it than to the next crop's.
     assert np.abs(blend - truth).mean() < 0.5 * np.abs(blend - np.roll(truth, CROPS, axis=0)).mean()
 
@@ -91,7 +93,7 @@ def test_turning_moves_inputs_and_truth_together() -> None:
     seen = set()
     for seed in range(60):
         channels, picture = turned(inputs, truth, np.random.default_rng(seed))
-        torch.testing.assert_close(channels[CANDIDATES], picture[0])
+        torch.testing.assert_close(channels[START], picture[0])
         seen.add(picture.numpy().tobytes())
     # four turns, each mirrored or not
     assert len(seen) == 8

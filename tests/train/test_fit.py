@@ -9,7 +9,7 @@ import torch
 
 from enhance import train
 from enhance.errors import JobError, ModelError
-from enhance.interpolate.network import CANDIDATES, INPUTS, RESIDUAL, load_network
+from enhance.interpolate.network import INPUTS, MEMBERS, RESIDUAL, START, load_network
 from enhance.train.data import Shard, make_shard
 from enhance.train.fit import (
     CURVE,
@@ -79,7 +79,7 @@ def test_sixty_steps_on_a_few_crops_beat_the_analytic_blend(shards: list[Shard])
     inputs, truth = (torch.from_numpy(a.astype(np.float32)) for a in (few.inputs, few.truth))
     with torch.inference_mode():
         fitted, _ = training.network(inputs)
-    assert fusion_loss(fitted, truth) < fusion_loss(inputs[:, CANDIDATES : CANDIDATES + 1], truth)
+    assert fusion_loss(fitted, truth) < fusion_loss(inputs[:, START:MEMBERS], truth)
 
 
 def test_an_interrupted_training_ends_with_the_weights_of_an_uninterrupted_one(
@@ -117,15 +117,15 @@ def test_scores_name_every_kind_and_what_they_are_compared_with(pictures: list[S
     assert row["pictures"] == 1
     # the first weights leave no residual
     assert row["network"] == pytest.approx(row["without_residual"], abs=1e-3)
-    assert mean_over_groups(table)["blend"] == row["blend"]
+    assert mean_over_groups(table)["start"] == row["start"]
     assert sum(weigh(network, pictures).values()) == pytest.approx(1, abs=1e-5)
 
 
 def test_at_rest_the_keys_are_compared_where_no_event_is_near() -> None:
     network = Training.begin(Settings(steps=1)).average
     inputs = np.zeros((1, INPUTS, 32, 32), np.float16)
-    inputs[:, : CANDIDATES + 1] = 0.5
-    inputs[:, CANDIDATES + 1, :, 16:] = 1.0
+    inputs[:, :MEMBERS] = 0.5
+    inputs[:, MEMBERS, :, 16:] = 1.0
     inputs[:, :2, :, 16:] = 0.9
     truth = np.full((1, 1, 32, 32), 0.5 + 2 / 255, np.float16)
     found = at_rest(network, [Shard(inputs, truth, {})])
