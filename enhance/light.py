@@ -22,6 +22,9 @@ Image = NDArray[np.float32]
 #: Light added before a logarithm (1 = full scale): a frame's noise and residual level, below which ratios mean nothing.
 LOG_FLOOR = np.float32(1 / 255)
 
+#: Codes this near full scale (share of the range) count as clipped: compression smears a ceiling by a code or two.
+CEILING = 0.005
+
 #: ITU-R BT.709 luma weights of linear R, G, B (rows of the standard's Y').
 LUMA_BT709 = (0.2126, 0.7152, 0.0722)
 
@@ -82,6 +85,11 @@ class Light:
         """Turn code values, any shape, into linear light: 0 at `black`, 1 at `white`, noise below black negative."""
         signal = (np.asarray(codes, dtype=np.float32) - np.float32(self.black)) / np.float32(self.white - self.black)
         return _odd(_decode, self.curve, signal)
+
+    def clipped(self, codes: NDArray[np.generic]) -> NDArray[np.bool_] | None:
+        """Find pixels at the ceiling in any colour, (H, W) or (H, W, 3) to (H, W); None where there is none."""
+        high = np.asarray(codes) >= self.white - CEILING * (self.white - self.black)
+        return (high if high.ndim == 2 else high.any(axis=-1)) if high.any() else None
 
     def to_codes(self, linear: NDArray[np.generic]) -> Image:
         """Turn linear light, any shape, into code values: float, unrounded, not clipped."""

@@ -46,12 +46,19 @@ class Frame:
         Exposure of row 0. Equal for a frame that counts as sharp.
     row_time_us : float
         Row r is exposed ``row_time_us * r`` later; 0 for a global shutter.
+    scale : float
+        How many times the light was when captured what it is here, exposures and gains brought to one: noise and
+        clipping are those of ``scale * image``.
+    clipped : ndarray of bool, shape (H, W), optional
+        Pixels that stood at the file's ceiling in some colour: no evidence of more than "at least". None: none.
     """
 
     image: Image
     start_us: int
     end_us: int
     row_time_us: float = 0.0
+    scale: float = 1.0
+    clipped: NDArray[np.bool_] | None = None
 
     @property
     def time_us(self) -> int:
@@ -138,59 +145,47 @@ class FrameSource(Protocol):
     @property
     def start_us(self) -> NDArray[np.int64]:
         """Starts of the exposures, shape (K,)."""
-        ...
 
     @property
     def end_us(self) -> NDArray[np.int64]:
         """Ends of the exposures, shape (K,)."""
-        ...
 
     @property
     def gain(self) -> NDArray[np.float64]:
         """Gain of each frame, shape (K,)."""
-        ...
 
     @property
     def names(self) -> Sequence[str]:
         """What each frame is called in its source."""
-        ...
 
     @property
     def shape(self) -> tuple[int, ...]:
         """Shape of one frame."""
-        ...
 
     @property
     def full_size(self) -> tuple[int, int]:
         """Width, height before the crop."""
-        ...
 
     @property
     def crop_origin(self) -> tuple[int, int]:
         """Corner (x, y) of the crop in the whole frame."""
-        ...
 
     @property
     def light(self) -> Light:
         """The frames' own curve."""
-        ...
 
     @property
     def notes(self) -> Sequence[str]:
         """Counted corrections in words."""
-        ...
 
     def __len__(self) -> int:
         """Count the frames."""
-        ...
 
     def frame(self, index: int) -> Frame:
         """Decode one frame into linear light."""
-        ...
 
     def close(self) -> None:
         """Release the file."""
-        ...
 
 
 class EventSource(Protocol):
@@ -204,49 +199,39 @@ class EventSource(Protocol):
     @property
     def size(self) -> tuple[int, int]:
         """Width, height of the sensor."""
-        ...
 
     @property
     def count(self) -> int:
         """Number of usable events."""
-        ...
 
     @property
     def first_us(self) -> int:
         """Time of the first event."""
-        ...
 
     @property
     def last_us(self) -> int:
         """Time of the last event."""
-        ...
 
     @property
     def cover_start_us(self) -> int:
         """When the sensor began to record."""
-        ...
 
     @property
     def cover_end_us(self) -> int:
         """When the sensor ceased to record."""
-        ...
 
     @property
     def notes(self) -> Sequence[str]:
         """Counted corrections in words."""
-        ...
 
     def between(self, start_us: int, end_us: int) -> Events:
         """Events of ``[start_us, end_us)``."""
-        ...
 
     def count_between(self, start_us: int, end_us: int) -> int:
         """About how many events lie in ``[start_us, end_us)``, without reading them: for plans, never for results."""
-        ...
 
     def close(self) -> None:
         """Release the file."""
-        ...
 
 
 @dataclass(frozen=True)
@@ -314,6 +299,7 @@ class FrameArray:
         Code values as a camera would store them.
     start_us, end_us : ndarray of int64, shape (K,)
     light : Light
+    gains : ndarray of float64, shape (K,), optional
     """
 
     codes: NDArray[np.generic]
@@ -321,11 +307,12 @@ class FrameArray:
     end_us: NDArray[np.int64]
     light: Light
     notes: Sequence[str] = ()
+    gains: NDArray[np.float64] | None = None
 
     @property
     def gain(self) -> NDArray[np.float64]:
-        """1 for every frame."""
-        return np.ones(len(self.codes))
+        """As given; 1 for every frame where none is."""
+        return np.ones(len(self.codes)) if self.gains is None else self.gains
 
     @property
     def names(self) -> Sequence[str]:
@@ -352,7 +339,8 @@ class FrameArray:
 
     def frame(self, index: int) -> Frame:
         """One frame in linear light."""
-        return Frame(self.light.to_linear(self.codes[index]), int(self.start_us[index]), int(self.end_us[index]))
+        codes, start_us, end_us = self.codes[index], int(self.start_us[index]), int(self.end_us[index])
+        return Frame(self.light.to_linear(codes), start_us, end_us, clipped=self.light.clipped(codes))
 
     def close(self) -> None:
         """Nothing to release."""
