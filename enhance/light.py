@@ -88,8 +88,8 @@ class Light:
 
     def clipped(self, codes: NDArray[np.generic]) -> NDArray[np.bool_] | None:
         """Find pixels at the ceiling in any colour, (H, W) or (H, W, 3) to (H, W); None where there is none."""
-        high = np.asarray(codes) >= self.white - CEILING * (self.white - self.black)
-        return (high if high.ndim == 2 else high.any(axis=-1)) if high.any() else None
+        high = np.atleast_3d(np.asarray(codes)) >= self.white - CEILING * (self.white - self.black)
+        return np.asarray(high.any(axis=-1)) if high.any() else None
 
     def to_codes(self, linear: NDArray[np.generic]) -> Image:
         """Turn linear light, any shape, into code values: float, unrounded, not clipped."""
