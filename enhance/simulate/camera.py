@@ -9,6 +9,10 @@ from numpy.typing import NDArray
 
 from enhance.light import Image, Light, check_curve
 
+MOSAICS = ("none", "RGGB", "BGGR", "GRBG", "GBRG")
+#: The columns' offsets are the camera's own: the same in every recording of one width.
+STRIPES_SEED = 77
+
 
 @dataclass(frozen=True)
 class Camera:
@@ -34,6 +38,14 @@ class Camera:
         When the first exposure begins.
     sees_lamp : bool
         Whether a flickering lamp lights the frames as well as the events.
+    exposure_shares, gains : tuple of float
+        Of `exposure_us`, above 0 to 1, and the gain behind the sensor, frame by frame, over and over; none: all 1.
+    dark : float
+        Light every pixel shows without any, as a share of full scale, which `black` does not tell.
+    stripes : float
+        Standard deviation of the offset that each column has in every frame, as a share of full scale.
+    mosaic : str
+        ``none``, or the colours of the first two rows' first two pixels: ``RGGB``, ``BGGR``, ``GRBG``, ``GBRG``.
 
     Raises
     ------
@@ -50,6 +62,11 @@ class Camera:
     black: float = 0.0
     start_us: int = 10_000
     sees_lamp: bool = True
+    exposure_shares: tuple[float, ...] = ()
+    gains: tuple[float, ...] = ()
+    dark: float = 0.0
+    stripes: float = 0.0
+    mosaic: str = "none"
 
     def __post_init__(self) -> None:
         check_curve(self.light_curve)
@@ -60,6 +77,13 @@ class Camera:
                 f"exposure_us is {self.exposure_us}; expected more than 0 and at most one frame interval, "
                 f"{1e6 / self.rate_hz:.0f} us at {self.rate_hz} frames a second"
             )
+        if not all(0 < share <= 1 for share in self.exposure_shares) or not all(gain > 0 for gain in self.gains):
+            raise ValueError(
+                f"exposure_shares are {self.exposure_shares} and gains {self.gains}; expected shares above 0, at most "
+                "1, and gains above 0"
+            )
+        if self.mosaic not in MOSAICS:
+            raise ValueError(f"mosaic is {self.mosaic!r}; expected one of {', '.join(MOSAICS)}")
 
     @property
     def light(self) -> Light:
@@ -71,9 +95,14 @@ class Camera:
         room = duration_us - self.start_us - self.exposure_us
         count = int(room * self.rate_hz / 1e6) + 1 if room >= 0 else 0
         starts = self.start_us + np.floor(np.arange(count) * 1e6 / self.rate_hz).astype(np.int64)
-        return starts, starts + self.exposure_us
+        lengths = np.rint(self.exposure_us * _over_and_over(self.exposure_shares, count)).astype(np.int64)
+        return starts, starts + np.maximum(lengths, 1)
 
-    def capture(self, exposed: Image, rng: np.random.Generator) -> NDArray[np.generic]:
+    def gain(self, count: int) -> NDArray[np.float64]:
+        """Gains of the first `count` frames."""
+        return _over_and_over(self.gains, count)
+
+    def capture(self, exposed: Image, rng: np.random.Generator, frame: int = 0) -> NDArray[np.generic]:
         """Turn mean light over an exposure into code values.
 
         Parameters
@@ -81,14 +110,45 @@ class Camera:
         exposed : ndarray of float32, shape (H, W) or (H, W, 3)
             Linear radiance, averaged over the exposure.
         rng : numpy.random.Generator
+        frame : int
+            Its number, which exposure and gain follow.
 
         Returns
         -------
-        ndarray of uint8 or uint16, same shape
+        ndarray of uint8 or uint16, shape (H, W) or (H, W, 3)
+            (H, W) as well where a mosaic lets each pixel see one colour.
         """
-        light = np.clip(exposed, 0.0, None)
+        light: NDArray[np.float32] = np.clip(exposed, 0.0, None)
+        if self.exposure_shares:
+            light = light * np.float32(self.exposure_shares[frame % len(self.exposure_shares)])
+        if self.mosaic != "none":
+            light = _seen_through(self.mosaic, light)
         if self.full_well is not None:
             electrons = rng.poisson(light * self.full_well) + rng.normal(0.0, self.read_noise, light.shape)
-            light = np.minimum(electrons / self.full_well, 1.0).astype(np.float32)
+            light = (electrons / self.full_well).astype(np.float32)
+        if self.gains:
+            light = light * np.float32(self.gains[frame % len(self.gains)])
+        light = np.minimum(self._offset(light), np.float32(1.0))
         codes = np.rint(self.light.to_codes(light))
         return np.clip(codes, 0, self.light.white).astype(np.uint8 if self.bits == 8 else np.uint16)
+
+    def _offset(self, light: Image) -> Image:
+        if self.stripes:
+            columns = np.random.default_rng(STRIPES_SEED).normal(0.0, self.stripes, light.shape[1])
+            light = light + np.asarray(columns if light.ndim == 2 else columns[:, None], np.float32)
+        return light + np.float32(self.dark) if self.dark else light
+
+
+def _over_and_over(values: tuple[float, ...], count: int) -> NDArray[np.float64]:
+    return np.resize(np.asarray(values or (1.0,), dtype=np.float64), count)
+
+
+def _seen_through(mosaic: str, light: Image) -> Image:
+    """Let each pixel see one colour, (H, W, 3) to (H, W); a grey picture is the same through any filter."""
+    if light.ndim == 2:
+        return light
+    seen = np.empty(light.shape[:2], light.dtype)
+    for place, colour in enumerate(mosaic):
+        rows, columns = slice(place // 2, None, 2), slice(place % 2, None, 2)
+        seen[rows, columns] = light[rows, columns, "RGB".index(colour)]
+    return seen

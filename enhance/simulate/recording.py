@@ -122,12 +122,12 @@ def simulate(
         # midpoint rule in linear light, summed in float64
         exposed, count = (exposed + seen, count + 1) if count else (seen.astype(np.float64), 1)
         if count == samples:
-            codes.append(camera.capture((exposed / count).astype(np.float32), camera_rng))
+            codes.append(camera.capture((exposed / count).astype(np.float32), camera_rng, frame))
             count = 0
     # what latency carries past the end is not recorded any more
     told = _joined(kept).between(0, duration_us)
     events, clock, cover = _into_event_clock(told, duration_us, clock_offset_us, drift_ppm)
-    frames = FrameArray(np.stack(codes), starts, ends, camera.light)
+    frames = FrameArray(np.stack(codes), starts, ends, camera.light, gains=camera.gain(len(starts)))
     return Simulated(
         Recording(title or scene.name, frames, EventArray(events, scene.size, cover)),
         scene,
@@ -150,11 +150,11 @@ def _instants(scene: Scene, camera: Camera, sensor: EventSensor, duration_us: in
     longest = 1e6 * STEP_PX / max(scene.speed_px_s, 1.0)
     if sensor.lamp_depth:
         longest = min(longest, 1e6 / sensor.lamp_hz / STEPS_A_CYCLE)
-    samples = max(5, int(np.ceil(camera.exposure_us / longest)))
-    step = camera.exposure_us / samples
     yield 0.0, -1, 0
     last = 0.0
-    for frame, start in enumerate(camera.exposures(duration_us)[0]):
+    for frame, (start, end) in enumerate(zip(*camera.exposures(duration_us), strict=True)):
+        samples = max(5, int(np.ceil((end - start) / longest)))
+        step = int(end - start) / samples
         yield from ((t, -1, 0) for t in _filled(last, start + 0.5 * step, longest))
         for k in range(samples):
             last = start + (k + 0.5) * step

@@ -139,3 +139,36 @@ def test_exposures_follow_the_rate_and_fit_the_duration():
 def test_settings_that_cannot_be_are_refused(wrong, message):
     with pytest.raises(ValueError, match=message):
         Camera(**wrong)
+
+
+def test_gain_and_exposure_change_what_each_frame_gets_of_one_light():
+    camera = Camera(
+        **CLEAN, rate_hz=50.0, exposure_us=8000, start_us=0, exposure_shares=(1.0, 0.5), gains=(1.0, 1.5, 1)
+    )
+    images, source = frames_of(Flat(0.3), camera, duration_s=0.13)
+    assert (source.end_us - source.start_us).tolist() == [8000, 4000, 8000, 4000, 8000, 4000]
+    assert source.gain.tolist() == [1, 1.5, 1, 1, 1.5, 1]
+    # light = radiance * exposure / longest exposure * gain
+    assert images.mean(axis=(1, 2)) == pytest.approx([0.3, 0.225, 0.3, 0.15, 0.45, 0.15], abs=1e-4)
+
+
+def test_dark_level_and_stripes_are_the_same_in_every_frame():
+    images, _ = frames_of(Flat(0.3), Camera(**CLEAN, exposure_us=1000, start_us=0, dark=0.02, stripes=0.005))
+    assert np.array_equal(images[0], images[1])
+    assert np.ptp(images[0], axis=0).max() == 0
+    columns = images[0][0].astype(np.float64)
+    # 24 columns: the standard error of a mean is 0.005 / sqrt(24), a standard deviation is within a third of 0.005
+    assert columns.mean() == pytest.approx(0.32, abs=3 * 0.005 / np.sqrt(24))
+    assert columns.std() == pytest.approx(0.005, rel=0.35)
+
+
+def test_a_mosaic_lets_each_pixel_see_the_colour_of_its_name():
+    colour = np.broadcast_to(np.float32([0.1, 0.2, 0.4]), (4, 6, 3))
+    codes = Camera(**CLEAN, mosaic="GBRG").capture(colour, np.random.default_rng(0))
+    assert np.rint(codes / 65535 * 10).tolist() == [[2, 4] * 3, [1, 2] * 3] * 2
+
+
+@pytest.mark.parametrize("wrong", [{"exposure_shares": (1.2,)}, {"gains": (0.0,)}, {"mosaic": "RGB"}])
+def test_settings_of_frames_that_cannot_be_are_refused(wrong):
+    with pytest.raises(ValueError, match="expected"):
+        Camera(**wrong)
