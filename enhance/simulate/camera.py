@@ -16,7 +16,7 @@ STRIPES_SEED = 77
 
 @dataclass(frozen=True)
 class Camera:
-    """A frame camera with a global shutter.
+    """A frame camera, with a global shutter or a rolling one.
 
     Parameters
     ----------
@@ -62,6 +62,7 @@ class Camera:
     black: float = 0.0
     start_us: int = 10_000
     sees_lamp: bool = True
+    row_time_us: float = 0.0
     exposure_shares: tuple[float, ...] = ()
     gains: tuple[float, ...] = ()
     dark: float = 0.0
@@ -90,9 +91,19 @@ class Camera:
         """The curve with its code values of no light and full scale."""
         return Light(self.light_curve, self.black, float(2**self.bits - 1))
 
-    def exposures(self, duration_us: int) -> tuple[NDArray[np.int64], NDArray[np.int64]]:
-        """Exposures that fit into ``[0, duration_us)``: starts and ends, int64, shape (K,)."""
-        room = duration_us - self.start_us - self.exposure_us
+    def row_delays_us(self, rows: int) -> NDArray[np.int64]:
+        """How much later than row 0 each row is exposed, int64, shape (rows,), floored."""
+        return np.floor(self.row_time_us * np.arange(rows)).astype(np.int64)
+
+    def exposures(self, duration_us: int, rows: int = 1) -> tuple[NDArray[np.int64], NDArray[np.int64]]:
+        """Exposures all rows of which fit into ``[0, duration_us)``: row 0's starts and ends, int64, shape (K,)."""
+        delays = self.row_delays_us(rows)
+        if self.start_us + delays.min() < 0:
+            raise ValueError(
+                f"row {rows - 1} of the first frame is exposed at {self.start_us + delays.min()} us; expected start_us "
+                f"of {-delays.min()} or more for rows read upward, {self.row_time_us} us each"
+            )
+        room = duration_us - self.start_us - self.exposure_us - int(delays.max())
         count = int(room * self.rate_hz / 1e6) + 1 if room >= 0 else 0
         starts = self.start_us + np.floor(np.arange(count) * 1e6 / self.rate_hz).astype(np.int64)
         lengths = np.rint(self.exposure_us * _over_and_over(self.exposure_shares, count)).astype(np.int64)
@@ -134,8 +145,9 @@ class Camera:
 
     def _offset(self, light: Image) -> Image:
         if self.stripes:
-            columns = np.random.default_rng(STRIPES_SEED).normal(0.0, self.stripes, light.shape[1])
-            light = light + np.asarray(columns if light.ndim == 2 else columns[:, None], np.float32)
+            noise = np.random.default_rng(STRIPES_SEED).standard_normal((light.shape[1], 1))
+            columns = (self.stripes * noise).astype(np.float32)
+            light = light + (columns if light.ndim == 3 else columns[:, 0])
         return light + np.float32(self.dark) if self.dark else light
 
 

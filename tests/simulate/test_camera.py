@@ -145,7 +145,7 @@ def test_gain_and_exposure_change_what_each_frame_gets_of_one_light():
     camera = Camera(
         **CLEAN, rate_hz=50.0, exposure_us=8000, start_us=0, exposure_shares=(1.0, 0.5), gains=(1.0, 1.5, 1)
     )
-    images, source = frames_of(Flat(0.3), camera, duration_s=0.13)
+    images, source = frames_of(Flat(0.3), camera, duration_s=0.12)
     assert (source.end_us - source.start_us).tolist() == [8000, 4000, 8000, 4000, 8000, 4000]
     assert source.gain.tolist() == [1, 1.5, 1, 1, 1.5, 1]
     # light = radiance * exposure / longest exposure * gain
