@@ -6,7 +6,7 @@ Every quantity carries its value, uncertainty, method and evidence. An unknown v
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Any
 
 import numpy as np
@@ -14,6 +14,7 @@ from numpy.typing import NDArray
 
 from enhance.clock import ClockMap
 from enhance.recording import Contrast, Events, EventSource
+from enhance.view import Lens, View, shared_view
 
 
 @dataclass(frozen=True)
@@ -54,8 +55,15 @@ class Rig:
         Value: list of [x, y] in sensor pixels, whose events are dropped.
     frame_noise : Quantity
         Value: [floor, shot]; variance of the frames' linear light = floor^2 + shot * light, 1 = full scale.
+    row_time_us : Quantity
+        From one row of the frames to the next, microseconds: 0 for a global shutter, negative where read upward.
     sensor_size : tuple of int
         Width, height of the event sensor.
+    registration : Quantity
+        Value: the 3x3 matrix, row by row, event pixel to pixel of the whole frame (undistorted, where there are
+        lenses), uncertainty in event pixels; None: not known, and taken as one shared view.
+    frame_lens, event_lens : Quantity
+        Value: fx, fy, cx, cy and the distortion coefficients; None: no distortion.
     """
 
     offset_us: Quantity
@@ -66,6 +74,18 @@ class Rig:
     hot_pixels: Quantity = Quantity((), None, "assumed", "not looked for")
     frame_noise: Quantity = Quantity((0.002, 5e-5), None, "assumed", "not looked for")
     sensor_size: tuple[int, int] = (0, 0)
+    row_time_us: Quantity = Quantity(0.0, None, "assumed", "a global shutter")
+    registration: Quantity = Quantity(None, None, "assumed", "one shared view")
+    frame_lens: Quantity = Quantity(None, None, "assumed", "no lens file")
+    event_lens: Quantity = Quantity(None, None, "assumed", "no lens file")
+
+    @property
+    def view(self) -> View | None:
+        """Where the event sensor looks; None where that is not known and one shared view is taken."""
+        if self.registration.value is None:
+            return None
+        matrix = np.asarray(self.registration.value, np.float64)
+        return View(matrix, _lens(self.frame_lens), _lens(self.event_lens))
 
     @property
     def contrast(self) -> Contrast:
@@ -81,8 +101,18 @@ class Rig:
         return np.sqrt(np.float32(floor**2) + np.float32(shot) * np.maximum(light, 0))
 
 
+def _lens(quantity: Quantity) -> Lens | None:
+    if quantity.value is None:
+        return None
+    fx, fy, cx, cy, *distortion = (float(v) for v in quantity.value)
+    return Lens((fx, fy), (cx, cy), tuple(distortion))
+
+
 class RiggedEvents:
     """Events as the frames see them: in the frame clock, on the frame's pixels, bad pixels dropped.
+
+    Where the sensors' pixels do not match one to one, each frame pixel has the events of the event pixel that its
+    centre falls into: an event acts on all frame pixels that it covers, with the threshold it has.
 
     In a bad pixel's place stand the events of the pixel beside it: without any it would miss all that moves there.
 
@@ -96,8 +126,15 @@ class RiggedEvents:
     crop_origin : tuple of int
         Corner of the crop in the whole frame.
     full_size : tuple of int
-        Width, height of the whole frame. A sensor of this size is cropped with the frame; one of the cropped size
-        matches it as it is.
+        Width, height of the whole frame. Without a registration, a sensor of its shape sees the same view and is
+        cropped with the frame; one of the cropped size matches it as it is.
+
+    Attributes
+    ----------
+    seen : ndarray of bool, shape (H, W), or None
+        Pixels the sensor looks at; None: all of them.
+    pitch : float
+        Frame pixels that an event pixel is wide.
     """
 
     def __init__(
@@ -111,8 +148,12 @@ class RiggedEvents:
         self._source = source
         self._clock = ClockMap(int(rig.offset_us.value), float(rig.drift_ppm.value), source.first_us)
         whole = full_size or frame_size
-        self._origin = crop_origin if tuple(source.size) == tuple(whole) else (0, 0)
-        self.size = frame_size
+        self.size, self.view = frame_size, rig.view or shared_view(source.size, whole, crop_origin, frame_size)
+        shift = self.view.shift
+        self.pitch = 1.0 if shift is not None else self.view.pitch(source.size)
+        self._spread = None if shift is not None else _Spread(self.view, source.size, frame_size, crop_origin)
+        self._origin = tuple(c - s for c, s in zip(crop_origin, shift or crop_origin, strict=True))
+        self.seen = self._overlap() if self._spread is None else self._spread.seen
         width, height = source.size
         self._bad: NDArray[np.bool_] = np.zeros((height, width), dtype=bool)
         hot: Sequence[Sequence[int]] = rig.hot_pixels.value or []
@@ -129,17 +170,31 @@ class RiggedEvents:
             )
         )
 
+    @staticmethod
+    def on_sensor(source: EventSource, rig: Rig) -> RiggedEvents:
+        """Events in the frame clock, bad pixels dropped, but on the sensor's own pixels."""
+        return RiggedEvents(source, replace(rig, registration=Quantity(np.eye(3).tolist()), **_NO_LENS), source.size)
+
     def between(self, start_us: int, end_us: int) -> Events:
         """Events of ``[start_us, end_us)`` of the frame clock."""
         events = self._source.between(self._clock.to_event(start_us), self._clock.to_event(end_us))
-        x0, y0 = self._origin
+        events = _with_lent(events.keep(~self._bad[events.y, events.x]), self._beside)
+        events = Events(self._clock.to_frame(events.t_us), events.x, events.y, events.polarity)
+        if self._spread is not None:
+            return self._spread(events)
         width, height = self.size
         # uint16 wraps below the crop's corner to large numbers, which the upper bound then rejects
-        events = _with_lent(events.keep(~self._bad[events.y, events.x]), self._beside)
-        x, y = events.x - np.uint16(x0), events.y - np.uint16(y0)
+        x, y = (column - np.uint16(at % 65_536) for column, at in zip((events.x, events.y), self._origin, strict=True))
         inside = (x < width) & (y < height)
-        moved = Events(self._clock.to_frame(events.t_us), x, y, events.polarity)
+        moved = Events(events.t_us, x, y, events.polarity)
         return moved if inside.all() else moved.keep(inside)
+
+    def _overlap(self) -> NDArray[np.bool_] | None:
+        """Where a sensor whose pixels match the frame's one to one looks."""
+        seen = np.zeros(self.size[::-1], bool)
+        (x0, y0), (width, height) = self._origin, self._source.size
+        seen[max(0, -y0) : max(0, height - y0), max(0, -x0) : max(0, width - x0)] = True
+        return None if seen.all() else seen
 
     def count_between(self, start_us: int, end_us: int) -> int:
         """About how many events lie in ``[start_us, end_us)`` of the frame clock."""
@@ -152,6 +207,38 @@ class RiggedEvents:
     def close(self) -> None:
         """Release the file."""
         self._source.close()
+
+
+_NO_LENS = {"frame_lens": Quantity(None), "event_lens": Quantity(None)}
+
+
+class _Spread:
+    """Lets each event stand at every frame pixel whose centre falls into its own pixel."""
+
+    def __init__(
+        self, view: View, sensor_size: tuple[int, int], frame_size: tuple[int, int], origin: tuple[int, int]
+    ) -> None:
+        from_pixel = view.lookup(sensor_size, frame_size, origin)
+        seen = from_pixel >= 0
+        self.seen = None if seen.all() else seen
+        self._width = sensor_size[0]
+        # frame pixels grouped by their event pixel: those of event pixel e stand at begin[e] .. begin[e] + count[e]
+        flat = np.flatnonzero(seen)
+        order = np.argsort(from_pixel.ravel()[flat], kind="stable")
+        y, x = np.divmod(flat[order], frame_size[0])
+        self._x, self._y = x.astype(np.uint16), y.astype(np.uint16)
+        self._count = np.bincount(from_pixel.ravel()[flat], minlength=sensor_size[0] * sensor_size[1])
+        self._begin = np.cumsum(self._count) - self._count
+
+    def __call__(self, events: Events) -> Events:
+        """Spread events, which stay sorted by time."""
+        pixel = events.y.astype(np.int64) * self._width + events.x
+        times = self._count[pixel]
+        ends = np.cumsum(times)
+        # 0, 1, 2 .. within each event's copies
+        nth = np.arange(int(ends[-1]) if len(ends) else 0) - np.repeat(ends - times, times)
+        at = np.repeat(self._begin[pixel], times) + nth
+        return Events(np.repeat(events.t_us, times), self._x[at], self._y[at], np.repeat(events.polarity, times))
 
 
 def _lent(bad: NDArray[np.bool_]) -> NDArray[np.int64] | None:

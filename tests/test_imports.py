@@ -19,7 +19,7 @@ ROOMS = {"read", "calibrate", "deblur", "interpolate", "measure", "write", "simu
 #: Each part's level; a part imports only from lower levels, so that rooms are blind to each other.
 LEVELS = [
     {"errors"},
-    {"clock", "light", "shipped"},
+    {"clock", "light", "shipped", "view"},
     {"recording", "settings"},
     {"rig", "kernels"},
     ROOMS,
