@@ -64,6 +64,12 @@ class Rig:
         lenses), uncertainty in event pixels; None: not known, and taken as one shared view.
     frame_lens, event_lens : Quantity
         Value: fx, fy, cx, cy and the distortion coefficients; None: no distortion.
+    dead_pixels : Quantity
+        Value: list of [x, y] in sensor pixels that never tell anything.
+    flicker_hz, flicker_depth, flicker_phase : Quantity
+        A lamp whose light is ``1 + depth * sin(2 pi f (t - t_first_event) + phase)``, event clock; None: none found.
+    lost : Quantity
+        Value: list of [start, end], event clock, in which events are missing. Of this recording alone, in no rig file.
     """
 
     offset_us: Quantity
@@ -78,6 +84,11 @@ class Rig:
     registration: Quantity = Quantity(None, None, "assumed", "one shared view")
     frame_lens: Quantity = Quantity(None, None, "assumed", "no lens file")
     event_lens: Quantity = Quantity(None, None, "assumed", "no lens file")
+    dead_pixels: Quantity = Quantity((), None, "assumed", "not looked for")
+    flicker_hz: Quantity = Quantity(None, None, "assumed", "not looked for")
+    flicker_depth: Quantity = Quantity(None, None, "assumed", "not looked for")
+    flicker_phase: Quantity = Quantity(None, None, "assumed", "not looked for")
+    lost: Quantity = Quantity((), None, "assumed", "not looked for")
 
     @property
     def view(self) -> View | None:
@@ -135,6 +146,10 @@ class RiggedEvents:
         Pixels the sensor looks at; None: all of them.
     pitch : float
         Frame pixels that an event pixel is wide.
+    source : EventSource
+        In the sensor's own world.
+    clock : ClockMap
+        From there to the frame clock.
     """
 
     def __init__(
@@ -145,8 +160,8 @@ class RiggedEvents:
         crop_origin: tuple[int, int] = (0, 0),
         full_size: tuple[int, int] | None = None,
     ) -> None:
-        self._source = source
-        self._clock = ClockMap(int(rig.offset_us.value), float(rig.drift_ppm.value), source.first_us)
+        self.source = source
+        self.clock = ClockMap(int(rig.offset_us.value), float(rig.drift_ppm.value), source.first_us)
         whole = full_size or frame_size
         self.size, self.view = frame_size, rig.view or shared_view(source.size, whole, crop_origin, frame_size)
         shift = self.view.shift
@@ -156,19 +171,20 @@ class RiggedEvents:
         self.seen = self._overlap() if self._spread is None else self._spread.seen
         width, height = source.size
         self._bad: NDArray[np.bool_] = np.zeros((height, width), dtype=bool)
-        hot: Sequence[Sequence[int]] = rig.hot_pixels.value or []
-        if len(hot):
-            columns, rows = np.asarray(hot, dtype=np.int64).T
+        bad: Sequence[Sequence[int]] = [*(rig.hot_pixels.value or ()), *(rig.dead_pixels.value or ())]
+        if len(bad):
+            columns, rows = np.asarray(bad, dtype=np.int64).T
             self._bad[rows, columns] = True
         self._beside = _lent(self._bad)
         self.count = source.count
         self.notes = source.notes
         self.first_us, self.last_us, self.cover_start_us, self.cover_end_us = (
             int(t)
-            for t in self._clock.to_frame(
+            for t in self.clock.to_frame(
                 np.array([source.first_us, source.last_us, source.cover_start_us, source.cover_end_us], dtype=np.int64)
             )
         )
+        self.lost: NDArray[np.int64] = self.clock.to_frame(np.array(rig.lost.value or (), np.int64).reshape(-1, 2))
 
     @staticmethod
     def on_sensor(source: EventSource, rig: Rig) -> RiggedEvents:
@@ -177,9 +193,9 @@ class RiggedEvents:
 
     def between(self, start_us: int, end_us: int) -> Events:
         """Events of ``[start_us, end_us)`` of the frame clock."""
-        events = self._source.between(self._clock.to_event(start_us), self._clock.to_event(end_us))
+        events = self.source.between(self.clock.to_event(start_us), self.clock.to_event(end_us))
         events = _with_lent(events.keep(~self._bad[events.y, events.x]), self._beside)
-        events = Events(self._clock.to_frame(events.t_us), events.x, events.y, events.polarity)
+        events = Events(self.clock.to_frame(events.t_us), events.x, events.y, events.polarity)
         if self._spread is not None:
             return self._spread(events)
         width, height = self.size
@@ -192,21 +208,22 @@ class RiggedEvents:
     def _overlap(self) -> NDArray[np.bool_] | None:
         """Where a sensor whose pixels match the frame's one to one looks."""
         seen = np.zeros(self.size[::-1], bool)
-        (x0, y0), (width, height) = self._origin, self._source.size
+        (x0, y0), (width, height) = self._origin, self.source.size
         seen[max(0, -y0) : max(0, height - y0), max(0, -x0) : max(0, width - x0)] = True
         return None if seen.all() else seen
 
     def count_between(self, start_us: int, end_us: int) -> int:
         """About how many events lie in ``[start_us, end_us)`` of the frame clock."""
-        return self._source.count_between(self._clock.to_event(start_us), self._clock.to_event(end_us))
+        return self.source.count_between(self.clock.to_event(start_us), self.clock.to_event(end_us))
 
     def covers(self, start_us: int, end_us: int) -> bool:
-        """Whether the sensor was recording all through ``[start_us, end_us)``."""
-        return self.cover_start_us <= start_us and end_us <= self.cover_end_us
+        """Whether the sensor was recording all through ``[start_us, end_us)``, and no events of it are lost."""
+        lost = ((self.lost[:, 0] < end_us) & (start_us < self.lost[:, 1])).any()
+        return self.cover_start_us <= start_us and end_us <= self.cover_end_us and not lost
 
     def close(self) -> None:
         """Release the file."""
-        self._source.close()
+        self.source.close()
 
 
 _NO_LENS = {"frame_lens": Quantity(None), "event_lens": Quantity(None)}
