@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
+from typing import Self
 
 import numpy as np
 from numpy.typing import NDArray
@@ -109,20 +110,25 @@ class Camera:
         lengths = np.rint(self.exposure_us * _over_and_over(self.exposure_shares, count)).astype(np.int64)
         return starts, starts + np.maximum(lengths, 1)
 
-    def gain(self, count: int) -> NDArray[np.float64]:
+    def frame_gains(self, count: int) -> NDArray[np.float64]:
         """Gains of the first `count` frames."""
         return _over_and_over(self.gains, count)
 
-    def capture(self, exposed: Image, rng: np.random.Generator, frame: int = 0) -> NDArray[np.generic]:
-        """Turn mean light over an exposure into code values.
+    def at(self, frame: int) -> Self:
+        """Give the camera as it takes one frame: that frame's exposure and gain first."""
+        if not self.exposure_shares and not self.gains:
+            return self
+        turned = [_over_and_over(v, frame + len(v))[frame:] if v else () for v in (self.exposure_shares, self.gains)]
+        return replace(self, exposure_shares=tuple(turned[0]), gains=tuple(turned[1]))
+
+    def capture(self, exposed: Image, rng: np.random.Generator) -> NDArray[np.generic]:
+        """Turn mean light over the first frame's exposure into code values.
 
         Parameters
         ----------
         exposed : ndarray of float32, shape (H, W) or (H, W, 3)
             Linear radiance, averaged over the exposure.
         rng : numpy.random.Generator
-        frame : int
-            Its number, which exposure and gain follow.
 
         Returns
         -------
@@ -131,14 +137,14 @@ class Camera:
         """
         light: NDArray[np.float32] = np.clip(exposed, 0.0, None)
         if self.exposure_shares:
-            light = light * np.float32(self.exposure_shares[frame % len(self.exposure_shares)])
+            light = light * np.float32(self.exposure_shares[0])
         if self.mosaic != "none":
             light = _seen_through(self.mosaic, light)
         if self.full_well is not None:
             electrons = rng.poisson(light * self.full_well) + rng.normal(0.0, self.read_noise, light.shape)
             light = (electrons / self.full_well).astype(np.float32)
         if self.gains:
-            light = light * np.float32(self.gains[frame % len(self.gains)])
+            light = light * np.float32(self.gains[0])
         light = np.minimum(self._offset(light), np.float32(1.0))
         codes = np.rint(self.light.to_codes(light))
         return np.clip(codes, 0, self.light.white).astype(np.uint8 if self.bits == 8 else np.uint16)

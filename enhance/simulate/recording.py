@@ -122,12 +122,12 @@ def simulate(
         # midpoint rule in linear light, summed in float64
         exposed, count = (exposed + seen, count + 1) if count else (seen.astype(np.float64), 1)
         if count == samples:
-            codes.append(camera.capture((exposed / count).astype(np.float32), camera_rng, frame))
+            codes.append(camera.at(frame).capture((exposed / count).astype(np.float32), camera_rng))
             count = 0
     # what latency carries past the end is not recorded any more
     told = _joined(kept).between(0, duration_us)
     events, clock, cover = _into_event_clock(told, duration_us, clock_offset_us, drift_ppm)
-    frames = FrameArray(np.stack(codes), starts, ends, camera.light, gains=camera.gain(len(starts)))
+    frames = FrameArray(np.stack(codes), starts, ends, camera.light, gains=camera.frame_gains(len(starts)))
     return Simulated(
         Recording(title or scene.name, frames, EventArray(events, scene.size, cover)),
         scene,
