@@ -34,6 +34,12 @@ class FramesSettings:
         Code values of no light (default 0) and of full scale (default: the depth's highest code).
     crop : tuple of int, optional
         x, y, width, height.
+    mosaic : str
+        ``none``, ``RGGB``, ``BGGR``, ``GRBG`` or ``GBRG``: raw pictures' colours, from the whole frame's corner.
+    dark : Path, optional
+        A dark frame: one picture taken without light.
+    level : str
+        ``estimate`` or ``given``: whether steps of brightness and stripes are looked for in the frames themselves.
     """
 
     source: Path
@@ -44,6 +50,9 @@ class FramesSettings:
     black: float | None = None
     white: float | None = None
     crop: tuple[int, int, int, int] | None = None
+    mosaic: str = "none"
+    dark: Path | None = None
+    level: str = "estimate"
 
 
 @dataclass(frozen=True)

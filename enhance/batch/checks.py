@@ -22,6 +22,7 @@ Document = Mapping[str, Any]
 INPUTS: tuple[tuple[str, str], ...] = (
     ("frames", "source"),
     ("frames", "times"),
+    ("frames", "dark"),
     ("events", "source"),
     ("rig", "file"),
 )

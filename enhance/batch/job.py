@@ -136,6 +136,9 @@ def _frames(table: FramesTable, folder: Path) -> FramesSettings:
         black=table.black,
         white=table.white,
         crop=table.crop,
+        mosaic=table.mosaic,
+        dark=folder / table.dark if table.dark else None,
+        level=table.level,
     )
 
 

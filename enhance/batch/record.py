@@ -46,6 +46,7 @@ def input_digests(settings: ClipSettings) -> dict[str, dict[str, Any]]:
     inputs = {
         "frames.source": settings.frames.source,
         "frames.times": settings.frames.times,
+        "frames.dark": settings.frames.dark,
         "events.source": settings.events.source,
         "rig.file": settings.rig.file,
     }

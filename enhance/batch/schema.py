@@ -17,6 +17,8 @@ from enhance.light import check_curve
 
 #: A factor beyond this asks for more pictures than events can tell apart, and is a slip of the hand.
 HIGHEST_FACTOR = 1000
+#: Colours of a raw picture's top left two by two pixels, row by row.
+MOSAICS = ("none", "RGGB", "BGGR", "GRBG", "GBRG")
 #: ln(7.4): no event sensor is set so coarse; a percentage written as a whole number is far above.
 HIGHEST_CONTRAST = 2.0
 
@@ -130,11 +132,9 @@ def _row_time(_: Any) -> NoReturn:
 
 
 def _mosaic(value: Any) -> str:
-    if value in ("RGGB", "BGGR", "GRBG", "GBRG"):
-        _not_built("reading a colour mosaic", "convert the frames to grey or RGB images first and leave the key out")
-    if value != "none":
-        raise ValueError(f'found {value!r}; expected "none"')
-    return "none"
+    if value not in MOSAICS:
+        raise ValueError(f"found {value!r}; expected {', '.join(MOSAICS[:-1])} or {MOSAICS[-1]}")
+    return str(value)
 
 
 def _triggers(_: Any) -> NoReturn:
@@ -182,6 +182,8 @@ class FramesTable(_Table):
     row_time: Annotated[None, PlainValidator(_row_time)] = None
     mosaic: Annotated[str, PlainValidator(_mosaic)] = "none"
     crop: Annotated[tuple[int, int, int, int], PlainValidator(_crop)] | None = None
+    dark: Name | None = None
+    level: Literal["estimate", "given"] = "estimate"
 
 
 class ColumnsTable(_Table):

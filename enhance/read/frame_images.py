@@ -27,6 +27,7 @@ class ImageFolder:
     Parameters
     ----------
     folder : Path
+        Or one picture.
 
     Raises
     ------
@@ -36,11 +37,14 @@ class ImageFolder:
 
     def __init__(self, folder: Path) -> None:
         try:
-            found = [p for p in folder.iterdir() if p.suffix.lower() in _SUFFIXES and not p.name.startswith(".")]
+            inside = [folder] if folder.is_file() else folder.iterdir()
+            found = [p for p in inside if p.suffix.lower() in _SUFFIXES and not p.name.startswith(".")]
         except OSError as error:
             raise FramesError(f"{folder} cannot be read: {error.strerror}. Check frames.source.") from error
         self._paths = sorted((p for p in found if p.is_file()), key=_natural)
         if not self._paths:
+            if folder.is_file():
+                raise FramesError(f"{folder} is no PNG, TIFF or JPEG file; expected one picture. Export it as PNG.")
             raise FramesError(f"{folder} holds no PNG, TIFF or JPEG file. Check frames.source.")
         headers = [_header(path) for path in self._paths]
         self._first = self._check_alike(headers)

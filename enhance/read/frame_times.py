@@ -58,7 +58,7 @@ def read_table(settings: FramesSettings, names: Sequence[str]) -> Exposures:
     FramesError
         If the table does not give each frame one possible exposure.
     JobError
-        If the exposure is missing, or the table asks for a changing gain.
+        If the exposure is missing.
     """
     if settings.times is None:
         raise JobError(
@@ -217,18 +217,19 @@ def _whole(path: Path, row: _Row, column: str) -> int:
 
 
 def _gain(path: Path, rows: list[_Row], columns: list[str]) -> NDArray[np.float64]:
-    for row in rows if "gain" in columns else ():
+    gains = np.ones(len(rows))
+    for i, row in enumerate(rows if "gain" in columns else ()):
         text = row.values["gain"]
         try:
-            changes = float(text) != 1.0
+            gains[i] = float(text)
         except ValueError:
             raise FramesError(f"{path}, row {row.number}: gain is {text!r}, expected a number. Mend the row.") from None
-        if changes:
-            raise JobError(
-                f"{path}, row {row.number}: gain is {text}. A gain other than 1 is not built yet: "
-                "divide the pictures by it beforehand, and leave the column out."
+        if not 0 < gains[i] < np.inf:
+            raise FramesError(
+                f"{path}, row {row.number}: gain is {text}; expected a factor above 0 (6 dB are a factor of 2). "
+                "Mend the row, or leave the column out."
             )
-    return np.ones(len(rows))
+    return gains
 
 
 def _check_order(start_us: NDArray[np.int64], end_us: NDArray[np.int64], where: list[str], remedy: str) -> None:

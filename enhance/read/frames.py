@@ -9,10 +9,12 @@ import numpy as np
 from numpy.typing import NDArray
 
 from enhance.errors import FramesError, JobError
-from enhance.light import Light, check_curve
+from enhance.light import Image, Light, check_curve
 from enhance.read.frame_images import ImageFolder
 from enhance.read.frame_times import Exposures, from_stamps, read_table
 from enhance.read.frame_video import Video
+from enhance.read.level import Development, read_dark
+from enhance.read.mosaic import check_mosaic
 from enhance.recording import Frame
 from enhance.settings import FramesSettings
 
@@ -42,19 +44,20 @@ class FileFrames:
         self,
         pictures: Pictures,
         exposures: Exposures,
-        light: Light,
+        development: Development,
         crop: tuple[int, int, int, int],
         notes: Sequence[str],
     ) -> None:
-        self._pictures = pictures
+        self._pictures, self._development = pictures, development
         self.start_us, self.end_us, self.gain = exposures.start_us, exposures.end_us, exposures.gain
         self.names: Sequence[str] = tuple(pictures.names)
         self.full_size = pictures.size
         x, y, width, height = crop
         self.crop_origin = (x, y)
         self._crop = (slice(y, y + height), slice(x, x + width))
-        self.shape: tuple[int, ...] = (height, width) + ((3,) if pictures.channels == 3 else ())
-        self.light = light
+        colour = pictures.channels == 3 or development.mosaic != "none"
+        self.shape: tuple[int, ...] = (height, width) + ((3,) if colour else ())
+        self.light = development.light
         self.notes: Sequence[str] = tuple(notes)
 
     def __len__(self) -> int:
@@ -64,8 +67,8 @@ class FileFrames:
         """Decode one frame into linear light."""
         if not 0 <= index < len(self):
             raise IndexError(f"frame {index} of {len(self)}")
-        codes = self._pictures.codes(index)[self._crop]
-        return Frame(self.light.to_linear(codes), int(self.start_us[index]), int(self.end_us[index]))
+        image, clipped = self._development.develop(self._pictures.codes(index), self._crop)
+        return Frame(image, int(self.start_us[index]), int(self.end_us[index]), clipped=clipped)
 
     def close(self) -> None:
         """Release the file."""
@@ -82,16 +85,24 @@ def open_frame_source(settings: FramesSettings) -> FileFrames:
         light = _light(settings, pictures, pictures.light_curve if isinstance(pictures, Video) else None)
         crop = _crop(settings, pictures.size)
         exposures = _exposures(settings, pictures)
+        check_mosaic(settings.mosaic, pictures.channels, pictures.size)
+        development = Development(light, settings.mosaic, _dark(settings, pictures, light))
     except BaseException:
         pictures.close()
         raise
-    return FileFrames(pictures, exposures, light, crop, [*pictures.notes, *exposures.notes])
+    return FileFrames(pictures, exposures, development, crop, [*pictures.notes, *exposures.notes])
 
 
 def _exposures(settings: FramesSettings, pictures: ImageFolder | Video) -> Exposures:
     if isinstance(pictures, ImageFolder) or settings.times is not None:
         return read_table(settings, pictures.names)
     return from_stamps(settings, pictures.stamps_us)
+
+
+def _dark(settings: FramesSettings, pictures: Pictures, light: Light) -> Image | None:
+    if settings.dark is None:
+        return None
+    return read_dark(settings.dark, light, pictures.size, pictures.channels, pictures.depth, settings.mosaic)
 
 
 def _light(settings: FramesSettings, pictures: Pictures, tagged: str | None) -> Light:

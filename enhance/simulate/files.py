@@ -66,11 +66,19 @@ def write_recording(simulated: Simulated, folder: str | Path) -> Path:
     _write(folder / _MARK, _truth(simulated).encode())
     for name, codes in zip(names, frames.codes, strict=True):
         _write(folder / "frames" / name, _png(codes))
-    rows = (f"{name},{start},{end}" for name, start, end in zip(names, frames.start_us, frames.end_us, strict=True))
-    _write(folder / "frames.csv", "\n".join(["frame,start_us,end_us", *rows, ""]).encode())
+    _write(folder / "frames.csv", _times(names, frames).encode())
     _replace(folder / "events.h5", lambda path: _write_events(path, events))
     _write(folder / "job.toml", _job(simulated, frames, events).encode())
     return folder / "job.toml"
+
+
+def _times(names: list[str], frames: FrameArray) -> str:
+    """Write the times table; the gain stands in it where it changes."""
+    rows = [f"{n},{a},{b}" for n, a, b in zip(names, frames.start_us, frames.end_us, strict=True)]
+    if np.all(frames.gain == 1):
+        return "\n".join(["frame,start_us,end_us", *rows, ""])
+    rows = [f"{row},{gain:g}" for row, gain in zip(rows, frames.gain, strict=True)]
+    return "\n".join(["frame,start_us,end_us,gain", *rows, ""])
 
 
 def _refuse_strangers(folder: Path) -> None:
@@ -182,6 +190,7 @@ def _job(simulated: Simulated, frames: FrameArray, events: EventArray) -> str:
             f'light_curve = "{light.curve}"',
             f"black = {light.black:g}",
             f"white = {light.white:g}",
+            *([] if simulated.camera.mosaic == "none" else [f'mosaic = "{simulated.camera.mosaic}"']),
             "",
             "[events]",
             'source = "events.h5"',

@@ -103,9 +103,14 @@ def test_each_mistake_is_named_with_its_row_and_values(tmp_path, text, match):
         read(tmp_path, text)
 
 
-@pytest.mark.parametrize("gain", ["2", "nan"])
-def test_a_changing_gain_is_refused_as_not_built(tmp_path, gain):
-    with pytest.raises(JobError, match=rf"row 3: gain is {gain}. A gain other than 1 is not built yet"):
+def test_a_changing_gain_is_read(tmp_path):
+    text = "frame,start_us,end_us,gain\n0,0,5,1\n1,10,15,1.4125\n2,20,25,2\n"
+    assert read(tmp_path, text).gain.tolist() == [1, 1.4125, 2]
+
+
+@pytest.mark.parametrize("gain", ["0", "-2", "nan", "inf"])
+def test_a_gain_that_no_camera_has_is_an_error(tmp_path, gain):
+    with pytest.raises(FramesError, match=rf"row 3: gain is {gain}; expected a factor above 0 \(6 dB are a factor"):
         read(tmp_path, f"frame,start_us,end_us,gain\n0,0,5,1\n1,10,15,{gain}\n2,20,25,1\n")
 
 
