@@ -16,6 +16,7 @@ The map, in the order of the flow::
 
     recording.py  what flows: frames, events, a recording, a picture
     rig.py        how the two sensors relate
+    rows.py       a rolling shutter seen as a global one
     view.py       where they look: the map from event pixels to frame pixels, lenses
     settings.py   what a job asks for
     clock.py      what time is
@@ -24,8 +25,8 @@ The map, in the order of the flow::
     errors.py     what can go wrong
     cli.py        the command line; the only file that prints and exits
 
-Imports point one way: errors < clock, light, view, shipped < recording, settings < rig, kernels < the rooms (blind to
-each other) < clip < batch, train < cli.
+Imports point one way: errors < clock, light, view, shipped < recording, settings < rig, rows, kernels < the rooms
+(blind to each other) < clip < batch, train < cli.
 """
 
 __version__ = "0.1.0"

@@ -21,7 +21,7 @@ LEVELS = [
     {"errors"},
     {"clock", "light", "shipped", "view"},
     {"recording", "settings"},
-    {"rig", "kernels"},
+    {"rig", "rows", "kernels"},
     ROOMS,
     {"clip"},
     {"batch", "train"},

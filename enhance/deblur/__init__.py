@@ -3,5 +3,15 @@
 from enhance.deblur.evidence import Evidence, change_evidence, own_evidence
 from enhance.deblur.integral import deblur
 from enhance.deblur.multi_frame import WINDOW, couple
+from enhance.deblur.rows import latent_at_one_instant, row_change
 
-__all__ = ["WINDOW", "Evidence", "change_evidence", "couple", "deblur", "own_evidence"]
+__all__ = [
+    "WINDOW",
+    "Evidence",
+    "change_evidence",
+    "couple",
+    "deblur",
+    "latent_at_one_instant",
+    "own_evidence",
+    "row_change",
+]
