@@ -12,6 +12,7 @@ from enhance.clock import ClockMap
 from enhance.light import Image
 from enhance.recording import EventArray, Events, FrameArray, Recording
 from enhance.simulate.camera import Camera
+from enhance.simulate.rolling import RowExposure
 from enhance.simulate.scene import Scene
 from enhance.simulate.sensor import EventSensor, SensorRun
 
@@ -102,7 +103,7 @@ def simulate(
     """
     camera_rng, sensor_rng = np.random.default_rng(seed).spawn(2)
     duration_us = round(duration_s * 1e6)
-    starts, ends = camera.exposures(duration_us)
+    starts, ends = camera.exposures(duration_us, scene.size[1])
     if not len(starts):
         raise ValueError(
             f"a duration of {duration_us} us holds no exposure of {camera.exposure_us} us "
@@ -112,13 +113,17 @@ def simulate(
     codes: list[NDArray[np.generic]] = []
     kept: list[Events] = []
     exposed, count = np.zeros(1), 0
-    for time_us, frame, samples in _instants(scene, camera, sensor, duration_us):
+    rolling = RowExposure(camera, scene.size[1], duration_us, _longest_step(scene, sensor))
+    instants = rolling.instants() if camera.row_time_us else _instants(scene, camera, sensor, duration_us)
+    for time_us, frame, samples in instants:
         steady = scene.render(time_us * 1e-6)
         lit = steady * np.float32(sensor.lamp(time_us * 1e-6)) if sensor.lamp_depth else steady
-        kept.append(run.advance(lit, time_us))
+        kept.append(run.advance(second_view.show(lit) if second_view else lit, time_us))
+        seen = lit if camera.sees_lamp else steady
+        if camera.row_time_us:
+            codes += [camera.at(k).capture(whole, camera_rng) for k, whole in rolling.add(seen, time_us)]
         if frame < 0:
             continue
-        seen = lit if camera.sees_lamp else steady
         # midpoint rule in linear light, summed in float64
         exposed, count = (exposed + seen, count + 1) if count else (seen.astype(np.float64), 1)
         if count == samples:
@@ -147,9 +152,7 @@ def _instants(scene: Scene, camera: Camera, sensor: EventSensor, duration_us: in
 
     Exposures are divided into equal parts, each shown by its middle; the gaps are filled with steps no longer.
     """
-    longest = 1e6 * STEP_PX / max(scene.speed_px_s, 1.0)
-    if sensor.lamp_depth:
-        longest = min(longest, 1e6 / sensor.lamp_hz / STEPS_A_CYCLE)
+    longest = _longest_step(scene, sensor)
     yield 0.0, -1, 0
     last = 0.0
     for frame, (start, end) in enumerate(zip(*camera.exposures(duration_us), strict=True)):
@@ -167,6 +170,12 @@ def _instants(scene: Scene, camera: Camera, sensor: EventSensor, duration_us: in
 def _filled(start: float, end: float, longest: float) -> NDArray[np.float64]:
     """Instants strictly between two that leave no step over `longest`."""
     return np.linspace(start, end, int(np.ceil((end - start) / longest)) + 1)[1:-1]
+
+
+def _longest_step(scene: Scene, sensor: EventSensor) -> float:
+    """Longest time between two pictures, microseconds."""
+    longest = 1e6 * STEP_PX / max(scene.speed_px_s, 1.0)
+    return min(longest, 1e6 / sensor.lamp_hz / STEPS_A_CYCLE) if sensor.lamp_depth else longest
 
 
 def _joined(kept: list[Events]) -> Events:
