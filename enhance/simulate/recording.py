@@ -118,7 +118,7 @@ def simulate(
     for time_us, frame, samples in instants:
         steady = scene.render(time_us * 1e-6)
         lit = steady * np.float32(sensor.lamp(time_us * 1e-6)) if sensor.lamp_depth else steady
-        kept.append(run.advance(second_view.show(lit) if second_view else lit, time_us))
+        kept.append(run.advance(lit, time_us))
         seen = lit if camera.sees_lamp else steady
         if camera.row_time_us:
             codes += [camera.at(k).capture(whole, camera_rng) for k, whole in rolling.add(seen, time_us)]
