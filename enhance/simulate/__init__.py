@@ -18,6 +18,7 @@ if TYPE_CHECKING:
     from enhance.simulate.kinds import KINDS, make_scene
     from enhance.simulate.recording import Simulated, simulate
     from enhance.simulate.scene import Scene
+    from enhance.simulate.second_view import SecondView
     from enhance.simulate.sensor import EventSensor
 
 __all__ = [
@@ -26,6 +27,7 @@ __all__ = [
     "Camera",
     "EventSensor",
     "Scene",
+    "SecondView",
     "Simulated",
     "benchmark_recordings",
     "demo_recording",
@@ -41,6 +43,7 @@ _HOMES = {
     "Camera": "camera",
     "EventSensor": "sensor",
     "Scene": "scene",
+    "SecondView": "second_view",
     "Simulated": "recording",
     "benchmark_recordings": "benchmark",
     "demo_recording": "files",
