@@ -94,6 +94,10 @@ class RigSettings:
         The clock, where it is given; ``shared`` clocks are 0 and 0.
     unknown : str
         ``stop`` or ``frames``: what to do where the clock cannot be told.
+    registration : str or 3x3 nested tuple of float, optional
+        ``shared``, ``estimate`` or the matrix from event pixels to whole-frame pixels; None: the file's, or shared.
+    frame_lens, event_lens : Path, optional
+        Lens files of an OpenCV calibration.
     """
 
     file: Path | None = None
@@ -101,6 +105,9 @@ class RigSettings:
     offset_us: int | None = None
     drift_ppm: float | None = None
     unknown: str = "stop"
+    registration: str | tuple[tuple[float, ...], ...] | None = None
+    frame_lens: Path | None = None
+    event_lens: Path | None = None
 
 
 @dataclass(frozen=True)

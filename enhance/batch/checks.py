@@ -25,6 +25,8 @@ INPUTS: tuple[tuple[str, str], ...] = (
     ("frames", "dark"),
     ("events", "source"),
     ("rig", "file"),
+    ("rig", "registration.frame_lens"),
+    ("rig", "registration.event_lens"),
 )
 
 
@@ -62,8 +64,9 @@ def mistakes_of_files(document: Document, job: Path) -> list[Mistake]:
 
 def _get(document: Document, table: str, key: str, kind: type | tuple[type, ...]) -> Any:
     """Return a value, or None where it is missing or of another kind."""
-    tables = document.get(table)
-    value = tables.get(key) if isinstance(tables, Mapping) else None
+    value: Any = document.get(table)
+    for name in key.split("."):
+        value = value.get(name) if isinstance(value, Mapping) else None
     return value if isinstance(value, kind) and not isinstance(value, bool) else None
 
 
@@ -160,14 +163,14 @@ def _times(values: list[Any]) -> list[int] | None:
 
 def _inputs(document: Document, folder: Path) -> Iterator[Mistake]:
     for table, key in INPUTS:
-        path = _path(document, table, key, folder)
+        path, at = _path(document, table, key, folder), (table, *key.split("."))
         # os.path, for it answers with no where a path cannot be (a name too long for the disk)
         if path is None or os.path.isfile(path):
             continue
         if not os.path.isdir(path):
-            yield (table, key), f"{path} does not exist; paths are relative to the job file's folder{_neighbour(path)}"
+            yield at, f"{path} does not exist; paths are relative to the job file's folder{_neighbour(path)}"
         elif (table, key) != ("frames", "source"):
-            yield (table, key), f"{path} is a folder; expected a file"
+            yield at, f"{path} is a folder; expected a file"
 
 
 def _neighbour(path: Path) -> str:

@@ -143,12 +143,19 @@ def _frames(table: FramesTable, folder: Path) -> FramesSettings:
 
 
 def _rig(table: RigTable, folder: Path) -> RigSettings:
+    lenses = {
+        name: folder / given
+        for name in ("frame_lens", "event_lens")
+        if (given := getattr(table.registration, name, None)) is not None
+    }
     return RigSettings(
         file=folder / table.file if table.file else None,
         contrast=table.contrast,
         offset_us=table.clock.offset if table.clock else None,
         drift_ppm=table.clock.drift_ppm if table.clock else None,
         unknown=table.unknown,
+        registration=table.registration.matrix if table.registration else None,
+        **lenses,
     )
 
 

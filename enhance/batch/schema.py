@@ -141,13 +141,31 @@ def _triggers(_: Any) -> NoReturn:
     _not_built("a clock from trigger times", 'give the offset, clock = { offset = "0 us" }, or write "estimate"')
 
 
-def _registration(value: Any) -> str:
-    if value != "shared":
-        _not_built(
-            "any registration but one shared view",
-            'bring the events onto the pixels of the frames first and write "shared" or leave the key out',
+def _registration(value: Any) -> Any:
+    if isinstance(value, dict) and value:
+        return value
+    return {"matrix": value}
+
+
+def _matrix(value: Any) -> str | tuple[tuple[float, ...], ...]:
+    if value in ("shared", "estimate"):
+        return str(value)
+    rows = value if isinstance(value, list) else []
+    if len(rows) != 3 or not all(isinstance(row, list) and len(row) == 3 for row in rows):
+        raise ValueError(
+            'expected "shared", "estimate", a matrix of three rows such as [[4, 0, 1.5], [0, 4, 1.5], [0, 0, 1]], or '
+            '{ matrix = ..., frame_lens = "frames.yml", event_lens = "events.yml" }'
         )
-    return "shared"
+    matrix = tuple(tuple(float(_number(each)) for each in row) for row in rows)
+    (a, b, c), (d, e, f), (g, h, i) = matrix
+    # |det| <= |row 1| |row 2| |row 3| (Hadamard): a thousand millionth part of that is none
+    size = math.prod(math.hypot(*row) for row in matrix)
+    if abs(a * (e * i - f * h) - b * (d * i - f * g) + c * (d * h - e * g)) <= 1e-9 * size:
+        raise ValueError(
+            f"found {value}, which is singular: it maps the whole sensor onto a line or a point; expected the map from "
+            f'event pixels to frame pixels. Write "estimate" to have it measured'
+        )
+    return matrix
 
 
 def _writable(text: str) -> str:
@@ -213,13 +231,21 @@ class ClockTable(_Table):
     triggers: Annotated[None, PlainValidator(_triggers)] = None
 
 
+class RegistrationTable(_Table):
+    """``rig.registration``."""
+
+    matrix: Annotated[str | tuple[tuple[float, ...], ...] | None, PlainValidator(_matrix)] = None
+    frame_lens: Name | None = None
+    event_lens: Name | None = None
+
+
 class RigTable(_Table):
     """``[rig]``."""
 
     file: Name | None = None
     contrast: Annotated[tuple[float, float] | None, PlainValidator(_contrast)] = None
     clock: Annotated[ClockTable | None, BeforeValidator(_clock)] = None
-    registration: Annotated[str, PlainValidator(_registration)] = "shared"
+    registration: Annotated[RegistrationTable | None, BeforeValidator(_registration)] = None
     unknown: Literal["stop", "frames"] = "stop"
 
 

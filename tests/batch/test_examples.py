@@ -21,7 +21,9 @@ def beside_its_inputs(job: Path, folder: Path) -> Path:
     copy.write_bytes(job.read_bytes())
     document = tomllib.loads(job.read_text())
     for table, key in INPUTS:
-        given = document.get(table, {}).get(key)
+        given = document.get(table, {})
+        for name in key.split("."):
+            given = given.get(name) if isinstance(given, dict) else None
         if given and Path(given).suffix:
             (copy.parent / given).parent.mkdir(parents=True, exist_ok=True)
             (copy.parent / given).touch()

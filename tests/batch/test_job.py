@@ -213,6 +213,15 @@ WRONG = [
     ),
     ({"netwrk.use": '"off"'}, "netwrk: is not a known key; did you mean network"),
     ({"output.factor": "3"}, "output.factor: is not a known key here; did you mean slow_motion.factor"),
+    ({"rig.registration": '"splitter"'}, 'expected "shared", "estimate", a matrix of three rows such as'),
+    ({"rig.registration": "[[4, 0, 1.5], [0, 4, 1.5]]"}, "a matrix of three rows such as"),
+    ({"rig.registration": '[[4, 0, "x"], [0, 4, 1.5], [0, 0, 1]]'}, 'found the text "x"; expected a number'),
+    ({"rig.registration": "[[4, 8, 1], [2, 4, 3], [0, 0, 1]]"}, "which is singular: it maps the whole sensor onto a"),
+    (
+        {"rig.registration": "{ matrix = [[0, 0, 0], [0, 0, 0], [0, 0, 0]] }"},
+        "registration.matrix: .*, which is singular",
+    ),
+    ({"rig.registration": '{ event_lens = "lens.yml" }'}, "registration.event_lens: .*lens.yml does not exist"),
     ({"events.qqqq": "3"}, "is not a known key; known here: source, columns, time_unit, size, cover"),
 ]
 
@@ -230,8 +239,6 @@ NOT_BUILT = [
     ({"frames.shutter": '"rolling"'}, "a rolling shutter is not built yet in this version; .*global shutter"),
     ({"frames.row_time": '"14.8 us"'}, "row_time, for a rolling shutter, is not built yet"),
     ({"rig.clock": '{ triggers = "triggers.csv" }'}, "a clock from trigger times is not built yet .* give the offset"),
-    ({"rig.registration": '"estimate"'}, "any registration but one shared view is not built yet"),
-    ({"rig.registration": "[[1, 0, 0], [0, 1, 0], [0, 0, 1]]"}, 'write "shared" or leave the key out'),
 ]
 
 
