@@ -14,6 +14,7 @@ from enhance.recording import EventArray, Events, FrameArray, Recording
 from enhance.simulate.camera import Camera
 from enhance.simulate.rolling import RowExposure
 from enhance.simulate.scene import Scene
+from enhance.simulate.second_view import SecondView
 from enhance.simulate.sensor import EventSensor, SensorRun
 
 #: Motion between two pictures the instruments are shown, pixels; log light in between is taken as straight.
@@ -73,8 +74,9 @@ def simulate(
     clock_offset_us: int = 0,
     drift_ppm: float = 0.0,
     title: str = "",
+    second_view: SecondView | None = None,
 ) -> Simulated:
-    """Record a scene with a frame camera and an event sensor that share one view.
+    """Record a scene with a frame camera and an event sensor that share one view, or have each its own.
 
     Memory holds one picture, one frame and the events; each picture is drawn once and shown to both instruments.
 
@@ -91,6 +93,8 @@ def simulate(
         ``t_frame = t_event + offset + 1e-6 * drift * (t_event - t_first_event)``.
     title : str
         The scene's name if left out.
+    second_view : SecondView, optional
+        Where the event sensor looks; the frames' own view, pixel by pixel, if left out.
 
     Returns
     -------
@@ -109,7 +113,8 @@ def simulate(
             f"a duration of {duration_us} us holds no exposure of {camera.exposure_us} us "
             f"that starts at {camera.start_us} us; expected a longer one"
         )
-    run = SensorRun(sensor, scene.size, sensor_rng)
+    sensor_size = second_view.size if second_view else scene.size
+    run = SensorRun(sensor, sensor_size, sensor_rng)
     codes: list[NDArray[np.generic]] = []
     kept: list[Events] = []
     exposed, count = np.zeros(1), 0
@@ -118,7 +123,7 @@ def simulate(
     for time_us, frame, samples in instants:
         steady = scene.render(time_us * 1e-6)
         lit = steady * np.float32(sensor.lamp(time_us * 1e-6)) if sensor.lamp_depth else steady
-        kept.append(run.advance(lit, time_us))
+        kept.append(run.advance(second_view.show(lit) if second_view else lit, time_us))
         seen = lit if camera.sees_lamp else steady
         if camera.row_time_us:
             codes += [camera.at(k).capture(whole, camera_rng) for k, whole in rolling.add(seen, time_us)]
@@ -134,7 +139,7 @@ def simulate(
     events, clock, cover = _into_event_clock(told, duration_us, clock_offset_us, drift_ppm)
     frames = FrameArray(np.stack(codes), starts, ends, camera.light, gains=camera.frame_gains(len(starts)))
     return Simulated(
-        Recording(title or scene.name, frames, EventArray(events, scene.size, cover)),
+        Recording(title or scene.name, frames, EventArray(events, sensor_size, cover)),
         scene,
         camera,
         sensor,
@@ -167,15 +172,15 @@ def _instants(scene: Scene, camera: Camera, sensor: EventSensor, duration_us: in
         yield float(duration_us), -1, 0
 
 
-def _filled(start: float, end: float, longest: float) -> NDArray[np.float64]:
-    """Instants strictly between two that leave no step over `longest`."""
-    return np.linspace(start, end, int(np.ceil((end - start) / longest)) + 1)[1:-1]
-
-
 def _longest_step(scene: Scene, sensor: EventSensor) -> float:
     """Longest time between two pictures, microseconds."""
     longest = 1e6 * STEP_PX / max(scene.speed_px_s, 1.0)
     return min(longest, 1e6 / sensor.lamp_hz / STEPS_A_CYCLE) if sensor.lamp_depth else longest
+
+
+def _filled(start: float, end: float, longest: float) -> NDArray[np.float64]:
+    """Instants strictly between two that leave no step over `longest`."""
+    return np.linspace(start, end, int(np.ceil((end - start) / longest)) + 1)[1:-1]
 
 
 def _joined(kept: list[Events]) -> Events:
