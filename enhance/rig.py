@@ -57,6 +57,10 @@ class Rig:
         Value: [floor, shot]; variance of the frames' linear light = floor^2 + shot * light, 1 = full scale.
     row_time_us : Quantity
         From one row of the frames to the next, microseconds: 0 for a global shutter, negative where read upward.
+    stripes : Quantity
+        Root mean square of the columns' offsets that were taken out of the frames. Of this recording alone, as the next.
+    brightness : Quantity
+        Value: list of [frame, factor] where the frames' brightness steps without any event, which was taken out.
     sensor_size : tuple of int
         Width, height of the event sensor.
     registration : Quantity
@@ -88,6 +92,8 @@ class Rig:
     flicker_hz: Quantity = Quantity(None, None, "assumed", "not looked for")
     flicker_depth: Quantity = Quantity(None, None, "assumed", "not looked for")
     flicker_phase: Quantity = Quantity(None, None, "assumed", "not looked for")
+    stripes: Quantity = Quantity(None, None, "assumed", "not looked for")
+    brightness: Quantity = Quantity(None, None, "assumed", "not looked for")
     lost: Quantity = Quantity((), None, "assumed", "not looked for")
 
     @property

@@ -24,6 +24,8 @@ SECTIONS = {
     "hot_pixels": "pixels.hot",
     "frame_noise": "frames.noise",
 }
+#: Sections that are written for people and not read back: they are of one recording, and are found anew in each.
+OWN = {"stripes": "frames.stripes", "brightness": "frames.brightness"}
 
 
 def rig_text(rig: Rig) -> str:
@@ -46,7 +48,7 @@ def rig_text(rig: Rig) -> str:
         "[sensor]",
         f"size = [{width}, {height}]",
     ]
-    for name, section in SECTIONS.items():
+    for name, section in (SECTIONS | OWN).items():
         quantity: Quantity = getattr(rig, name)
         lines += ["", f"[{section}]"]
         if quantity.value is not None:
