@@ -15,7 +15,8 @@ from collections.abc import Sequence
 import numpy as np
 from numpy.typing import NDArray
 
-from enhance.calibrate.evidence import USABLE_LIGHT, Pair, thinned
+from enhance.calibrate.clipped import USABLE_LIGHT
+from enhance.calibrate.evidence import Pair, thinned
 from enhance.kernels.double_integral import log_blur_ratio
 from enhance.kernels.event_integral import event_counts
 from enhance.recording import Contrast, EventSource
@@ -111,7 +112,7 @@ def _stays_in_range(pair: Pair, first: NDArray[np.float64], second: NDArray[np.f
     low, high = USABLE_LIGHT
     inside = np.ones(first.shape, bool)
     for frame, ratio in ((pair.first, first), (pair.second, second)):
-        latent = frame.image * np.exp(-ratio)
+        latent = frame.image * frame.scale * np.exp(-ratio)
         inside &= (latent > low) & (latent < high)
     return inside
 

@@ -8,6 +8,8 @@ from dataclasses import dataclass, replace
 import numpy as np
 from numpy.typing import NDArray
 
+from enhance.calibrate.clipped import USABLE_LIGHT as USABLE_LIGHT
+from enhance.calibrate.clipped import tells_light
 from enhance.light import luma
 from enhance.recording import Events, Frame, FrameSource
 
@@ -19,8 +21,6 @@ KEPT = 12
 LONGEST_US = 2_000_000
 #: Events of one pair at the most. Every pixel is evidence on its own, so some rows tell as much as all, sooner.
 MOST_EVENTS = 60_000
-#: Light (1 = full scale) below which the frame's noise and level, above which its ceiling, spoil a logarithm.
-USABLE_LIGHT = (0.02, 0.97)
 
 
 @dataclass(frozen=True)
@@ -94,8 +94,7 @@ def gather_pairs(frames: FrameSource, keys: Sequence[int]) -> list[Pair]:
 
 def _pair(frames: FrameSource, first: int, second: int) -> Pair:
     one, two = _grey(frames.frame(first)), _grey(frames.frame(second))
-    low, high = USABLE_LIGHT
-    usable = (one.image > low) & (one.image < high) & (two.image > low) & (two.image < high)
+    usable = tells_light(one) & tells_light(two)
     change = np.zeros(usable.shape)
     change[usable] = np.log(two.image[usable].astype(np.float64)) - np.log(one.image[usable])
     if usable.any():
@@ -104,4 +103,4 @@ def _pair(frames: FrameSource, first: int, second: int) -> Pair:
 
 
 def _grey(frame: Frame) -> Frame:
-    return Frame(luma(frame.image), frame.start_us, frame.end_us, frame.row_time_us)
+    return replace(frame, image=luma(frame.image))
