@@ -1,6 +1,20 @@
 """How the two sensors relate: clock, contrast thresholds, hot pixels, frame noise."""
 
+from enhance.calibrate.clipped import ClippedCount
+from enhance.calibrate.gain import find_gain
+from enhance.calibrate.levelled import LevelledFrames, as_tabled
 from enhance.calibrate.rig import calibrate, known_rig
 from enhance.calibrate.rig_file import read_rig, rig_text
+from enhance.calibrate.stripes import find_stripes
 
-__all__ = ["calibrate", "known_rig", "read_rig", "rig_text"]
+__all__ = [
+    "ClippedCount",
+    "LevelledFrames",
+    "as_tabled",
+    "calibrate",
+    "find_gain",
+    "find_stripes",
+    "known_rig",
+    "read_rig",
+    "rig_text",
+]
