@@ -11,6 +11,7 @@ from enhance.calibrate.contrast import START, estimate_contrast
 from enhance.calibrate.evidence import Pair, gather_pairs
 from enhance.calibrate.frame_noise import estimate_frame_noise
 from enhance.calibrate.hot_pixels import find_hot_pixels
+from enhance.calibrate.known_view import known_view
 from enhance.calibrate.ramp import estimate_ramp
 from enhance.calibrate.rig_file import as_written, read_rig
 from enhance.errors import CalibrationError
@@ -25,7 +26,7 @@ UNKNOWN = Quantity(None, None, "not measured", "")
 
 
 def calibrate(recording: Recording, keys: Sequence[int], settings: RigSettings) -> Rig:
-    """Work out how the two sensors of a recording relate.
+    """Work out how the two sensors of a recording relate whose pixels lie on each other.
 
     Parameters
     ----------
@@ -93,7 +94,7 @@ def known_rig(recording: Recording, settings: RigSettings) -> Rig:
         rig = replace(rig, drift_ppm=Quantity(settings.drift_ppm))
     if rig.drift_ppm.value is None:
         rig = replace(rig, drift_ppm=Quantity(0.0, None, "assumed", "drift is not estimated yet; give rig.clock"))
-    return rig
+    return known_view(rig, recording, settings)
 
 
 def _events(recording: Recording, rig: Rig) -> RiggedEvents:

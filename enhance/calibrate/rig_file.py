@@ -9,6 +9,9 @@ from numbers import Integral
 from pathlib import Path
 from typing import Any
 
+import numpy as np
+
+from enhance.calibrate.lens_file import COEFFICIENTS
 from enhance.errors import CalibrationError
 from enhance.rig import Quantity, Rig
 
@@ -23,6 +26,9 @@ SECTIONS = {
     "ramp_us": "contrast.ramp_us",
     "hot_pixels": "pixels.hot",
     "frame_noise": "frames.noise",
+    "registration": "registration.matrix",
+    "frame_lens": "registration.frame_lens",
+    "event_lens": "registration.event_lens",
 }
 #: Sections that are written for people and not read back: they are of one recording, and are found anew in each.
 OWN = {"stripes": "frames.stripes", "brightness": "frames.brightness"}
@@ -66,9 +72,13 @@ def as_written(rig: Rig) -> Rig:
         quantity: Quantity = getattr(rig, name)
         if isinstance(quantity.value, float):
             changes[name] = replace(quantity, value=round(quantity.value, DIGITS))
-        elif name == "frame_noise" and quantity.value is not None:
-            changes[name] = replace(quantity, value=[round(float(v), DIGITS) for v in quantity.value])
+        elif name in ("frame_noise", "registration", "frame_lens", "event_lens") and quantity.value is not None:
+            changes[name] = replace(quantity, value=_rounded(quantity.value))
     return replace(rig, **changes)
+
+
+def _rounded(value: Any) -> Any:
+    return [_rounded(each) for each in value] if isinstance(value, (list, tuple)) else round(float(value), DIGITS)
 
 
 def read_rig(path: Path, sensor_size: tuple[int, int]) -> Rig:
@@ -146,6 +156,9 @@ _EXPECTED = {
     "ramp_us": "microseconds, 0 or more",
     "hot_pixels": "a list of [x, y]",
     "frame_noise": "two numbers from 0 to 1: floor and shot",
+    "registration": "three rows of three numbers that are no singular matrix",
+    "frame_lens": "fx, fy, cx, cy and 4, 5, 8, 12 or 14 coefficients",
+    "event_lens": "fx, fy, cx, cy and 4, 5, 8, 12 or 14 coefficients",
 }
 
 
@@ -161,6 +174,21 @@ def _sound(name: str, value: Any) -> bool:
         return isinstance(value, int) and number and value >= 0
     if not isinstance(value, list):
         return False
+    if name == "registration":
+        return _is_matrix(value)
+    if name.endswith("_lens"):
+        return len(value) - 4 in COEFFICIENTS and all(map(_is_number, value)) and min(value[:2]) > 0
     if name == "frame_noise":
         return len(value) == 2 and all(isinstance(v, (int, float)) and 0 <= v <= 1 for v in value)
     return all(isinstance(p, list) and len(p) == 2 and all(isinstance(v, int) and v >= 0 for v in p) for p in value)
+
+
+def _is_number(value: Any) -> bool:
+    return isinstance(value, (int, float)) and not isinstance(value, bool) and bool(np.isfinite(value))
+
+
+def _is_matrix(value: list[Any]) -> bool:
+    shaped = len(value) == 3 and all(isinstance(row, list) and len(row) == 3 for row in value)
+    if not shaped or not all(_is_number(each) for row in value for each in row):
+        return False
+    return abs(float(np.linalg.det(value))) > 1e-9 * float(np.prod(np.linalg.norm(value, axis=1)))
