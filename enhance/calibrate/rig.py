@@ -6,14 +6,30 @@ from collections.abc import Sequence
 from dataclasses import replace
 from typing import Any
 
-from enhance.calibrate.clock import METHOD, coarse_offset, refine_offset
+import numpy as np
+
+from enhance.calibrate.clock import METHOD, MODEL_ERROR, coarse_offset, refine_offset
 from enhance.calibrate.contrast import START, estimate_contrast
+from enhance.calibrate.drift import (
+    LONG_US,
+    STRETCHES,
+    drift_quantity,
+    find_stretch,
+    fit_line,
+    span_us,
+    stretches,
+    too_short,
+    track,
+)
+from enhance.calibrate.even_light import lamp_told
 from enhance.calibrate.evidence import Pair, gather_pairs
+from enhance.calibrate.flicker import find_flicker
 from enhance.calibrate.frame_noise import estimate_frame_noise
 from enhance.calibrate.hot_pixels import find_hot_pixels
 from enhance.calibrate.known_view import known_view
 from enhance.calibrate.ramp import estimate_ramp
 from enhance.calibrate.rig_file import as_written, read_rig
+from enhance.calibrate.steady import in_steady_light
 from enhance.errors import CalibrationError
 from enhance.recording import Contrast, Recording
 from enhance.rig import Quantity, Rig, RiggedEvents
@@ -47,10 +63,13 @@ def calibrate(recording: Recording, keys: Sequence[int], settings: RigSettings) 
         If the clock or the thresholds cannot be told, or the rig file does not fit.
     """
     rig = known_rig(recording, settings)
+    if rig.flicker_hz.value is None:
+        rig = replace(rig, flicker_hz=find_flicker(recording.events))
+    recording = replace(recording, events=in_steady_light(recording.events, rig))
     if rig.hot_pixels.value is None:
         rig = replace(rig, hot_pixels=find_hot_pixels(recording.events))
     pairs = _covered(gather_pairs(recording.frames, keys), recording, rig)
-    rig = _with_clock(rig, recording, pairs, settings)
+    rig = _with_clock(rig, recording, pairs, keys, settings)
     if rig.offset_us.value is None:
         return _without_clock(rig)
     if rig.contrast_positive.value is None or rig.contrast_negative.value is None:
@@ -59,7 +78,7 @@ def calibrate(recording: Recording, keys: Sequence[int], settings: RigSettings) 
         # Where the sensor did not record, a pixel without events need not be quiet.
         told = estimate_frame_noise(_covered(pairs, recording, rig), _events(recording, rig))
         rig = replace(rig, frame_noise=told)
-    return as_written(rig)
+    return as_written(lamp_told(rig, recording.frames, keys, _events(recording, rig)))
 
 
 def known_rig(recording: Recording, settings: RigSettings) -> Rig:
@@ -93,14 +112,15 @@ def known_rig(recording: Recording, settings: RigSettings) -> Rig:
     if settings.drift_ppm is not None:
         rig = replace(rig, drift_ppm=Quantity(settings.drift_ppm))
     if rig.drift_ppm.value is None:
-        rig = replace(rig, drift_ppm=Quantity(0.0, None, "assumed", "drift is not estimated yet; give rig.clock"))
+        rig = replace(rig, drift_ppm=Quantity(0.0, None, "assumed", "not looked for: the offset is given without it"))
     return known_view(rig, recording, settings)
 
 
 def _events(recording: Recording, rig: Rig) -> RiggedEvents:
     frames = recording.frames
     height, width = frames.shape[:2]
-    return RiggedEvents(recording.events, rig, (width, height), frames.crop_origin, frames.full_size)
+    events = in_steady_light(recording.events, rig)
+    return RiggedEvents(events, rig, (width, height), frames.crop_origin, frames.full_size)
 
 
 def _covered(pairs: list[Pair], recording: Recording, rig: Rig) -> list[Pair]:
@@ -111,12 +131,17 @@ def _covered(pairs: list[Pair], recording: Recording, rig: Rig) -> list[Pair]:
     return [pair for pair in pairs if events.covers(pair.first.start_us, pair.second.end_us)]
 
 
-def _with_clock(rig: Rig, recording: Recording, pairs: list[Pair], settings: RigSettings) -> Rig:
+def _with_clock(rig: Rig, recording: Recording, pairs: list[Pair], keys: Sequence[int], settings: RigSettings) -> Rig:
     if rig.offset_us.value is not None:
         return _with_ramp(rig, recording, pairs)
     guess, how = _first_guess(recording)
+    events = _events(recording, replace(rig, offset_us=Quantity(guess)))
+    drifts = rig.drift_ppm.method == "assumed"
     try:
-        peak = coarse_offset(pairs, _events(recording, replace(rig, offset_us=Quantity(guess))))
+        if drifts and span_us(recording.frames, keys) >= LONG_US:
+            parts, number, pairs, peak = find_stretch(recording.frames, keys, events)
+        else:
+            peak, parts = coarse_offset(pairs, events), []
     except CalibrationError as error:
         unknown = Quantity(None, None, METHOD, str(error))
         # One frame makes no clip; as it was captured it is still worth a picture.
@@ -126,7 +151,37 @@ def _with_clock(rig: Rig, recording: Recording, pairs: list[Pair], settings: Rig
             f"{recording.title}: the clock of the events cannot be told: {error}. Give rig.clock "
             f'(an offset, or "shared"), or set rig.unknown = "frames" to go on with the frames alone'
         ) from error
-    return _refined(rig, recording, pairs, guess + peak.offset_us, how + peak.remark)
+    rig = _refined(rig, recording, pairs, guess + peak.offset_us, how + peak.remark)
+    if not drifts:
+        return rig
+    span = span_us(recording.frames, keys)
+    short = too_short(span)
+    if short is not None:
+        return replace(rig, drift_ppm=short)
+    if not parts:
+        parts, number = list(stretches(recording.frames, keys)), STRETCHES // 2
+    return _with_drift(rig, recording, parts, number, _contrast(rig, recording, pairs))
+
+
+def _with_drift(rig: Rig, recording: Recording, parts: list[Sequence[int]], number: int, contrast: Contrast) -> Rig:
+    """Find the drift, and with it the offset at the first event; neither is touched where no drift shows."""
+    frames = recording.frames
+    span = span_us(frames, [key for part in parts for key in part])
+
+    def events_at(offset_us: int) -> RiggedEvents:
+        return _events(recording, replace(rig, offset_us=Quantity(offset_us)))
+
+    marks = track(frames, parts, (number, int(rig.offset_us.value)), events_at, contrast)
+    line = fit_line(marks, recording.events.first_us)
+    drift = drift_quantity(line, span)
+    rig = replace(rig, drift_ppm=drift)
+    if line is None or (drift.value == 0.0 and span < LONG_US):
+        return rig
+    # Of a long recording one stretch alone was looked at so far: all of them together say more, drift or none.
+    offset = line.at_first_us if drift.value else line.middle_us
+    uncertainty = float(np.hypot(line.sigma_us, MODEL_ERROR * contrast.ramp_us))
+    evidence = f"{rig.offset_us.evidence}; {drift.evidence}; the uncertainty is that at the worse end"
+    return replace(rig, offset_us=Quantity(round(offset), uncertainty, METHOD, evidence))
 
 
 def _with_ramp(rig: Rig, recording: Recording, pairs: list[Pair]) -> Rig:

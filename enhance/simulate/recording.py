@@ -136,7 +136,7 @@ def simulate(
             count = 0
     # what latency carries past the end is not recorded any more
     told = _joined(kept).between(0, duration_us)
-    events, clock, cover = _into_event_clock(told, duration_us, clock_offset_us, drift_ppm)
+    events, clock, cover = into_event_clock(told, duration_us, clock_offset_us, drift_ppm)
     frames = FrameArray(np.stack(codes), starts, ends, camera.light, gains=camera.frame_gains(len(starts)))
     return Simulated(
         Recording(title or scene.name, frames, EventArray(events, sensor_size, cover)),
@@ -193,7 +193,7 @@ def _joined(kept: list[Events]) -> Events:
     return Events(t, *columns)
 
 
-def _into_event_clock(
+def into_event_clock(
     events: Events, duration_us: int, offset_us: int, drift_ppm: float
 ) -> tuple[Events, ClockMap, tuple[int, int]]:
     """Turn frame times into event times, so that the clock's own formula leads back; and the cover with them."""

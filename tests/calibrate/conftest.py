@@ -133,3 +133,8 @@ def with_events():
         return replace(recording, events=EventArray(events, size or recording.events.size, cover))
 
     return exchange
+
+
+@pytest.fixture(scope="session")
+def pan():
+    return Pan
