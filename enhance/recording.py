@@ -118,11 +118,14 @@ class Contrast:
         Contrast thresholds, natural log units, both > 0.
     ramp_us : int
         How long before its event a change of light began, at the most; 0: the staircase of the published form.
+    pitch : float
+        Frame pixels that an event pixel is wide: sums of its events are spread smoothly over more than one.
     """
 
     positive: float
     negative: float
     ramp_us: int = 0
+    pitch: float = 1.0
 
     @property
     def thresholds(self) -> tuple[float, float]:

@@ -107,8 +107,13 @@ class Rig:
     @property
     def contrast(self) -> Contrast:
         """What one event means; the thresholds must be known."""
+        view = self.view
+        pitch = 1.0 if view is None or view.shift is not None else max(1.0, view.pitch(self.sensor_size))
         return Contrast(
-            float(self.contrast_positive.value), float(self.contrast_negative.value), int(self.ramp_us.value or 0)
+            float(self.contrast_positive.value),
+            float(self.contrast_negative.value),
+            int(self.ramp_us.value or 0),
+            pitch,
         )
 
     def noise(self, light: NDArray[np.float32]) -> NDArray[np.float32]:

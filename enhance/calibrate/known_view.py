@@ -53,8 +53,9 @@ def known_view(rig: Rig, recording: Recording, settings: RigSettings) -> Rig:
         if path is not None:
             numbers: dict[str, Any] = {name: Quantity(read_lens(path, size), None, "given", path.name)}
             rig = replace(rig, **numbers)
-    if lenses and rig.registration.value is None and given != "estimate":
-        rig = replace(rig, registration=replace(SHARED, value=_shared(recording).matrix.tolist()))
+    shared = _shared(recording)
+    if rig.registration.value is None and given != "estimate" and (lenses or shared.shift is None):
+        rig = replace(rig, registration=replace(SHARED, value=shared.matrix.tolist()))
     _check(rig, recording)
     return rig
 
