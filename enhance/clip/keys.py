@@ -12,14 +12,32 @@ from dataclasses import dataclass
 from typing import TYPE_CHECKING, TypeVar
 
 import numpy as np
+from numpy.typing import NDArray
 
 from enhance.clock import middle_us
-from enhance.deblur import WINDOW, Evidence, change_evidence, couple, own_evidence
-from enhance.interpolate import Candidates, Span, analytic_blend, in_colour, key_candidates
+from enhance.deblur import (
+    WINDOW,
+    Evidence,
+    change_evidence,
+    couple,
+    latent_at_one_instant,
+    own_evidence,
+    row_change,
+)
+from enhance.interpolate import (
+    Candidates,
+    Span,
+    analytic_blend,
+    in_colour,
+    key_candidates,
+    rows_at_one_instant,
+)
+from enhance.interpolate.trust import TrustModel, cause_maps
 from enhance.kernels.event_integral import event_counts
-from enhance.light import LOG_FLOOR, encode, log_light, luma
+from enhance.light import LOG_FLOOR, Image, encode, log_light, luma
 from enhance.recording import By, Events, Frame, FrameSource, Kind, Picture
 from enhance.rig import Rig, RiggedEvents
+from enhance.rows import FrameEvents, events_in_row_time, frames_in_row_time, row_delays_us
 
 if TYPE_CHECKING:
     from enhance.interpolate.network import FusionNetwork
@@ -54,6 +72,8 @@ class Keys:
     rig : Rig
     network : FusionNetwork, optional
         Refines the keys; without it they stay as the double integral has them.
+    trust : TrustModel, optional
+        Without it no error is expected of any picture.
     """
 
     def __init__(
@@ -63,11 +83,18 @@ class Keys:
         events: RiggedEvents | None,
         rig: Rig,
         network: FusionNetwork | None = None,
+        trust: TrustModel | None = None,
     ) -> None:
-        self.frames, self.indices, self.events, self.rig = frames, list(indices), events, rig
-        self.network = network
-        self.times_us = [_time(frames, index) for index in indices]
+        row_time, height = float(rig.row_time_us.value or 0), frames.shape[0]
+        self.frames = frames_in_row_time(frames, row_time)
+        self.indices, self.events, self.rig = list(indices), events, rig
+        # For what is compared with a frame's own exposure; between pictures of one instant the scene's own time holds.
+        self._rowed = None if events is None else events_in_row_time(events, row_time, height)
+        self._delays_us, self._rolling = row_delays_us(row_time, height), row_time != 0
+        self.network, self.trust = network, trust
+        self.times_us = [_time(self.frames, index) for index in indices]
         self._kept = Evidences(OrderedDict(), OrderedDict())
+        self._carried_rows: OrderedDict[int, NDArray[np.float32]] = OrderedDict()
         self._integrals: OrderedDict[int, Picture] = OrderedDict()
         self._pictures: OrderedDict[int, Picture] = OrderedDict()
 
@@ -79,7 +106,7 @@ class Keys:
         index = self.indices[key]
         start, end = int(self.frames.start_us[index]), int(self.frames.end_us[index])
         slack = (end - start) // SLACK
-        return self.events is not None and self.events.covers(start + slack, end - slack)
+        return self._rowed is not None and self._rowed.covers(start + slack, end - slack)
 
     def span_covered(self, key: int) -> bool:
         """Whether the events cover the span from a key to the next."""
@@ -87,16 +114,20 @@ class Keys:
 
     def span_events(self, key: int) -> Events:
         """Events of the span from a key to the next, and as far beyond either end as ramps reach."""
-        return self._near(self.times_us[key], self.times_us[key + 1])
+        return self._near(self.times_us[key], self.times_us[key + 1], self.events)
 
     def exposed(self, key: int) -> np.ndarray:
-        """Count the events of each pixel within a key's exposure, float32, shape (H, W)."""
+        """Count the events of each pixel that part a key from its frame, float32, shape (H, W).
+
+        Those within the exposure, and for a rolling shutter those from the row's own instant to the key's.
+        """
         index = self.indices[key]
         shape = (self.frames.shape[0], self.frames.shape[1])
-        if self.events is None:
+        if self._rowed is None:
             return np.zeros(shape, np.float32)
-        seen = self.events.between(int(self.frames.start_us[index]), int(self.frames.end_us[index]))
-        return event_counts(seen.x, seen.y, seen.polarity, shape).sum(axis=0).astype(np.float32)
+        seen = self._rowed.between(int(self.frames.start_us[index]), int(self.frames.end_us[index]))
+        count = event_counts(seen.x, seen.y, seen.polarity, shape).sum(axis=0).astype(np.float32)
+        return count + self._row_change(key)[1].astype(np.float32) if self._rolling else count
 
     def picture(self, key: int) -> Picture:
         """Make the sharp picture of a key at its own time; one that events do not cover stays as captured.
@@ -114,39 +145,66 @@ class Keys:
 
     def _picture(self, key: int) -> Picture:
         picture = self.integral(key)
-        candidates = self.candidates(key) if self.network else None
+        candidates = self.candidates(key) if self.network or self.trust else None
         if candidates is None:
             return picture
-        light, by, _ = fused(self.network, candidates)
-        return Picture(in_colour(picture.image, light), picture.time_us, Kind.DEBLURRED, by)
+        made = fused(self.network, candidates)
+        error = self.expected_error("deblurred", made, candidates, (key - 1, key))
+        return Picture(in_colour(picture.image, made.light), picture.time_us, Kind.DEBLURRED, made.by, error)
+
+    def expected_error(
+        self, kind: str, made: Fused, candidates: Candidates, steps: Sequence[int]
+    ) -> NDArray[np.float32] | None:
+        """Expect each pixel's squared error, (H, W); the steps between keys at the picture tell how far events miss."""
+        if self.trust is None:
+            return None
+        maps = cause_maps(candidates, made.light, made.spread, self.miss(steps), self.frames.light, self.rig)
+        return self.trust.kinds[f"{kind} by {made.by}"].error_map(maps)
 
     def candidates(self, key: int) -> Candidates | None:
         """Make what is known of a deblurred key by its neighbours; None where no neighbour can tell."""
         picture = self.integral(key)
-        before = key > 0 and self.span_covered(key - 1)
-        after = key + 1 < len(self) and self.span_covered(key)
-        if picture.kind is not Kind.DEBLURRED or not (before or after):
+        ends = self._ends(key)
+        if picture.kind is not Kind.DEBLURRED or ends[0] == ends[1]:
             return None
-        ends = (key - before, key + after)
         left, right = (luma(self.integral(end).image) for end in ends)
         interval = (self.times_us[ends[0]], self.times_us[ends[1]])
-        span = Span(left, right, interval, self._near(*interval), self.rig.contrast)
+        span = Span(left, right, interval, self._near(*interval, self.events), self.rig.contrast)
         captured = luma(self.frames.frame(self.indices[key]).image)
-        alone = np.exp(self._own(key).value).astype(np.float32) - LOG_FLOOR
+        own = self._own(key).value
+        if self._rolling:
+            moved, _ = self._row_change(key)
+            captured = np.exp(log_light(captured) + moved).astype(np.float32) - LOG_FLOOR
+            own = own + moved
+        alone = np.exp(own).astype(np.float32) - LOG_FLOOR
         return key_candidates(luma(picture.image), captured, alone, picture.time_us, span, self.exposed(key))
 
-    def miss(self, key: int) -> np.ndarray:
-        """By how much the events miss the step from a key to the next, each by its own double integral.
+    def _ends(self, key: int) -> tuple[int, int]:
+        """Give the keys beside a key that events lead to; the key itself where they do not."""
+        before = key > 0 and self.span_covered(key - 1)
+        after = key + 1 < len(self) and self.span_covered(key)
+        return key - before, key + after
+
+    def miss(self, steps: Sequence[int]) -> NDArray[np.float32]:
+        """By how much the events miss steps from a key to the next, each key by its own double integral.
 
         Which is by how much the one, carried into the other's exposure and exposed again, misses that frame.
+
+        Parameters
+        ----------
+        steps : sequence of int
+            Keys that a step begins at; those that are none are passed over.
 
         Returns
         -------
         ndarray of float32, shape (H, W)
-            Log light.
+            Log light; root mean square over the steps.
         """
-        step = self._change(key).value
-        return np.asarray(self._own(key + 1).value - self._own(key).value - step, dtype=np.float32)
+        own, change = self._own, self._change
+        missed = [
+            own(step + 1).value - own(step).value - change(step).value for step in steps if 0 <= step < len(self) - 1
+        ]
+        return np.sqrt(np.mean(np.square(missed), axis=0)).astype(np.float32)
 
     def integral(self, key: int) -> Picture:
         """Make the picture of a key by the double integral alone; as `picture` without a network."""
@@ -155,22 +213,52 @@ class Keys:
     def _integral(self, key: int) -> Picture:
         frame = self.frames.frame(self.indices[key])
         time_us = self.times_us[key]
-        if frame.exposure_us == 0 or not self.covered(key):
+        sharp = frame.exposure_us == 0 and not self._rolling
+        if sharp or not self.covered(key):
             return Picture(frame.image, time_us, Kind.CAPTURED, By.FRAMES)
         # ratio of the latent to the blurred light, the same for every colour
         change = self._log_latent(key).astype(np.float32) - log_light(luma(frame.image))
         ratio = np.exp(change if frame.image.ndim == 2 else change[..., None])
         image = (np.maximum(frame.image, 0) + LOG_FLOOR) * ratio - LOG_FLOOR
+        if self._rolling:
+            image = self._at_one_instant(key, image)
         return Picture(image, time_us, Kind.DEBLURRED, By.INTEGRAL)
 
-    def _log_latent(self, key: int) -> np.ndarray:
+    def _at_one_instant(self, key: int, image: Image) -> Image:
+        """Bring a key whose rows stand at their own instants to its time."""
+        ends = self._ends(key)
+        interval = (self.times_us[ends[0]], self.times_us[ends[1]])
+        neighbours = None if ends[0] == ends[1] else (self._carried(ends[0]), self._carried(ends[1]))
+        events, contrast = self._near(*interval, self.events), self.rig.contrast
+        return rows_at_one_instant(
+            self._carried(key), image, self.times_us[key], neighbours, interval, events, contrast
+        )
+
+    def _carried(self, key: int) -> NDArray[np.float32]:
+        """Luma of a rolling shutter's key at its time, by the events alone, shape (H, W)."""
+
+        def make() -> NDArray[np.float32]:
+            own, change, at = self._window(key)
+            moved = self._row_change(key)
+            times = np.diff(self.times_us[max(0, key - 1) : key + 2])
+            steps = (int(times[0]), int(times[-1])) if len(times) else (1, 1)
+            latent = latent_at_one_instant(own, change, at, moved, self._delays_us, steps, self.rig.contrast)
+            return np.exp(latent).astype(np.float32) - LOG_FLOOR
+
+        return remember(self._carried_rows, key, make, 5)
+
+    def _window(self, key: int) -> tuple[list[Evidence], list[Evidence], int]:
+        """Evidence of the keys near one and of the steps between them, and the place of the key among them."""
         first, last = max(0, key - WINDOW), min(len(self) - 1, key + WINDOW)
         own = [self._own(k) for k in range(first, last + 1)]
-        change = [self._change(k) for k in range(first, last)]
+        return own, [self._change(k) for k in range(first, last)], key - first
+
+    def _log_latent(self, key: int) -> np.ndarray:
+        own, change, at = self._window(key)
         return couple(
             [e.value for e in own],
             [e.value for e in change],
-            key - first,
+            at,
             [e.weight for e in own],
             [e.weight for e in change],
         )
@@ -183,7 +271,7 @@ class Keys:
             interval = (frame.start_us, frame.end_us)
             if not self.covered(key):
                 return _captured(frame, noise)
-            events = self._near(*interval)
+            events = self._near(*interval, self._rowed)
             log_image = log_light(light).astype(np.float64)
             return own_evidence(log_image, noise, events, interval, self.times_us[key], self.rig.contrast)
 
@@ -192,30 +280,45 @@ class Keys:
     def _change(self, key: int) -> Evidence:
         def make() -> Evidence:
             shape = self.frames.shape[:2]
-            if not self.span_covered(key):
-                return Evidence(np.zeros(shape), np.full(shape, _UNSEEN))
             interval = (self.times_us[key], self.times_us[key + 1])
-            return change_evidence(self.span_events(key), interval, self.rig.contrast, (shape[0], shape[1]))
+            if self._rowed is None or not self._rowed.covers(*interval):
+                return Evidence(np.zeros(shape), np.full(shape, _UNSEEN))
+            events = self._near(*interval, self._rowed)
+            return change_evidence(events, interval, self.rig.contrast, (shape[0], shape[1]))
 
         return remember(self._kept.change, key, make, _KEPT)
 
-    def _near(self, start_us: int, end_us: int) -> Events:
-        if self.events is None:
+    def _row_change(self, key: int) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+        """Log change from each row's own instant to a rolling shutter's key, and its events, shape (H, W) each."""
+        time_us, delays = self.times_us[key], self._delays_us
+        events = self._near(time_us + int(delays.min()), time_us + int(delays.max()), self.events)
+        return row_change(events, delays, time_us, self.rig.contrast, (self.frames.shape[0], self.frames.shape[1]))
+
+    def _near(self, start_us: int, end_us: int, events: FrameEvents | None) -> Events:
+        if events is None:
             return Events.none()
         ramp = self.rig.contrast.ramp_us
-        return self.events.between(start_us - ramp, end_us + 2 * ramp)
+        return events.between(start_us - ramp, end_us + 2 * ramp)
 
 
-def fused(network: FusionNetwork | None, candidates: Candidates) -> tuple[np.ndarray, By, np.ndarray]:
-    """Make a picture's luma from its candidates: the light, what made it, and the spread of what it was made of."""
+@dataclass(frozen=True)
+class Fused:
+    """A picture's luma, (H, W) linear light, what made it, and the variance of what it was made of, (H, W) signal."""
+
+    light: NDArray[np.float32]
+    by: By
+    spread: NDArray[np.float32]
+
+
+def fused(network: FusionNetwork | None, candidates: Candidates) -> Fused:
+    """Make a picture's luma from its candidates, with the network or without."""
     if network is None:
-        light = analytic_blend(candidates)
-        return light, By.INTEGRAL, encode("srgb", candidates.stack).var(axis=0)
+        return Fused(analytic_blend(candidates), By.INTEGRAL, encode("srgb", candidates.stack).var(axis=0))
     # torch is loaded only where a network is used
     from enhance.interpolate.network import fuse
 
     light, spread = fuse(network, candidates)
-    return light, By.NETWORK, spread
+    return Fused(light, By.NETWORK, spread)
 
 
 def _captured(frame: Frame, noise: np.ndarray) -> Evidence:

@@ -10,8 +10,9 @@ from numpy.typing import NDArray
 
 from enhance.clip.keys import Keys, fused, remember
 from enhance.interpolate import Span, with_colour
-from enhance.kernels.optical_flow import flow_between, moved_blend
-from enhance.light import Image
+from enhance.interpolate.trust import frame_cause_maps
+from enhance.kernels.optical_flow import flow_between, moved_sides
+from enhance.light import luma
 from enhance.recording import By, Kind, Picture
 
 Flow = NDArray[np.float32]
@@ -49,11 +50,12 @@ class Pictures:
         if times[key] == time_us:
             return self.keys.picture(key)
         if not self.keys.span_covered(key):
-            return Picture(self._by_frames(key, time_us), time_us, Kind.INSERTED, By.FRAMES)
+            return self._by_frames(key, time_us)
         span = self.span(key)
         candidates = span.at(time_us)
-        light, by, _ = fused(self.keys.network, candidates)
-        return Picture(with_colour(light, span, candidates), time_us, Kind.INSERTED, by)
+        made = fused(self.keys.network, candidates)
+        error = self.keys.expected_error("inserted", made, candidates, (key,))
+        return Picture(with_colour(made.light, span, candidates), time_us, Kind.INSERTED, made.by, error)
 
     def span(self, key: int) -> Span:
         """Prepare the span from a key to the next, which the events must cover."""
@@ -65,9 +67,17 @@ class Pictures:
         exposed = np.stack([self.keys.exposed(key), self.keys.exposed(key + 1)])
         return Span(left, right, interval, self.keys.span_events(key), self.keys.rig.contrast, exposed)
 
-    def _by_frames(self, key: int, time_us: int) -> Image:
+    def _by_frames(self, key: int, time_us: int) -> Picture:
         """Move the keys by their own flow: no event tells anything here."""
         left, right = self.keys.picture(key).image, self.keys.picture(key + 1).image
         there, back = remember(self._flows, key, lambda: (flow_between(left, right), flow_between(right, left)), 2)
         start, end = self.keys.times_us[key], self.keys.times_us[key + 1]
-        return moved_blend(left, right, there, back, (time_us - start) / (end - start))
+        w = np.float32((time_us - start) / (end - start))
+        sides = moved_sides(left, right, there, back, w)
+        image = (1 - w) * sides[0] + w * sides[1]
+        error = None
+        if self.keys.trust is not None:
+            light, rig = self.keys.frames.light, self.keys.rig
+            maps = frame_cause_maps(np.stack([luma(side) for side in sides]), there, luma(image), light, rig)
+            error = self.keys.trust.kinds["inserted by frames"].error_map(maps)
+        return Picture(image, time_us, Kind.INSERTED, By.FRAMES, error)

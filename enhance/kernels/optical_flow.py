@@ -105,25 +105,27 @@ def frame_only_picture(image0: Image, image1: Image, weight: float) -> Image:
     ndarray of float32, same shape
         Linear light.
     """
+    w = np.float32(weight)
     forward, backward = flow_between(image0, image1), flow_between(image1, image0)
-    return moved_blend(image0, image1, forward, backward, weight)
+    sides = moved_sides(image0, image1, forward, backward, w)
+    return (1 - w) * sides[0] + w * sides[1]
 
 
-def moved_blend(
-    image0: Image, image1: Image, forward: NDArray[np.float32], backward: NDArray[np.float32], weight: float
-) -> Image:
-    """Two pictures carried to one instant by their flows and weighed by time: for many instants of one span.
+def moved_sides(
+    image0: Image, image1: Image, forward: NDArray[np.float32], backward: NDArray[np.float32], weight: np.float32
+) -> tuple[Image, Image]:
+    """Carry two pictures to one instant by their flows: for many instants of one span.
 
     Parameters
     ----------
     image0, image1 : ndarray of float32, shape (H, W) or (H, W, 3)
     forward, backward : ndarray of float32, shape (H, W, 2)
         From 0 to 1 and from 1 to 0.
-    weight : float
+    weight : float32
+        0 at `image0`, 1 at `image1`.
 
     Returns
     -------
-    ndarray of float32, same shape as the pictures
+    tuple of ndarray of float32, same shape as the pictures
     """
-    w = np.float32(weight)
-    return (1 - w) * warp(image0, w * backward) + w * warp(image1, (1 - w) * forward)
+    return warp(image0, weight * backward), warp(image1, (1 - weight) * forward)

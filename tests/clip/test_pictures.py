@@ -31,7 +31,7 @@ def pictures_of(recording, cover=None, rig=RIG, indices=None):
         source = EventArray(source.between(start, end), source.size, (start, end))
     events = RiggedEvents(source, rig, SIZE) if rig.offset_us.value is not None else None
     indices = range(len(recording.frames)) if indices is None else indices
-    return Pictures(Keys(recording.frames, indices, events, rig), None)
+    return Pictures(Keys(recording.frames, indices, events, rig))
 
 
 def mse(picture, truth):
