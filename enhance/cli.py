@@ -182,6 +182,9 @@ def _add_train(parser: argparse.ArgumentParser) -> None:
     parser.add_argument("--recordings", type=_whole(1), default=60, help="how many to render (default: 60)")
     parser.add_argument("--seed", type=_whole(0), default=1, help="of the recordings and the weights (default: 1)")
     parser.add_argument("--resume", action="store_true", help="take up the training that stands in FOLDER")
+    parser.add_argument("--ablations", type=_positive, default=0.0, metavar="MINUTES",
+                        help="also fit networks that lack something, for the card")  # fmt: skip
+    parser.add_argument("--trust", type=_whole(1), default=0, metavar="RECORDINGS", help="also fit trust, on so many")
 
 
 def _whole(least: int) -> Any:
@@ -312,13 +315,11 @@ def _simulate(arguments: argparse.Namespace) -> int:
 def _train(arguments: argparse.Namespace) -> int:
     from enhance import train
 
-    train.run(
-        arguments.folder,
-        minutes=arguments.minutes,
-        recordings=arguments.recordings,
-        seed=arguments.seed,
-        resume=arguments.resume,
-    )
+    asked = {name: getattr(arguments, name) for name in train.OPTIONS}
+    progress = _Progress()
+    path = train.run(arguments.folder, progress=lambda *step: progress(arguments.folder, *step), **asked)
+    progress.close()
+    _say(f"The weights and what is known of them stand in {path.parent}: {path.name}, {path.stem}.md.")
     return 0
 
 

@@ -3,19 +3,34 @@
 from __future__ import annotations
 
 import logging
+import math
 from collections.abc import Callable
+from functools import partial
 from pathlib import Path
+from typing import TYPE_CHECKING, Any
 
 from enhance.errors import JobError
 
+if TYPE_CHECKING:
+    from enhance.train.data import Shard
+    from enhance.train.fit import Crops
+
 logger = logging.getLogger(__name__)
+
+#: Steps done, steps in all, what is being done.
+Progress = Callable[[int, int, str], None]
 
 #: Held-out recordings: three of every kind of scene.
 HELD_OUT = 36
+#: Share of the recordings and of the steps that see keys not yet refined by the network.
+FIRST_RECORDINGS, FIRST_STEPS = 0.6, 1 / 3
 #: Steps that are timed, and steps before them, to tell how many fit into the minutes asked for.
 TIMED, BEFORE = 12, 3
 
-__all__ = ["run"]
+#: Names of what a training is asked for, as `run` has them.
+OPTIONS = ("minutes", "recordings", "seed", "resume", "ablations", "trust")
+
+__all__ = ["OPTIONS", "run"]
 
 
 def run(
@@ -26,8 +41,9 @@ def run(
     seed: int,
     resume: bool,
     ablations: float = 0.0,
+    trust: int = 0,
     processes: int = 2,
-    progress: Callable[[int, int, str], None] | None = None,
+    progress: Progress | None = None,
 ) -> Path:
     """Fit the fusion network.
 
@@ -49,6 +65,8 @@ def run(
         Take up the training that stands in the folder.
     ablations : float
         Minutes to fit each of the networks that lack something, for the card; none of them if 0.
+    trust : int
+        Recordings to fit trust on, for ``trust.json``; none is written if 0.
     processes : int
         That render. Any number leaves the same recordings.
     progress : callable, optional
@@ -67,10 +85,10 @@ def run(
     ModelError
         If the state in the folder cannot be read.
     """
-    from enhance.train.card import write_card
-    from enhance.train.data import load_shard, make_shards, shard_path
-    from enhance.train.fit import STATE, Crops, Settings, Training, fit, load_state
+    from enhance.train.card import WEIGHTS, write_card, write_weights
+    from enhance.train.fit import STATE, Settings, Training, fit, load_state
     from enhance.train.lacking import measure_ablations
+    from enhance.train.trust import run_trust
 
     stands = (folder / STATE).is_file()
     if stands and not resume:
@@ -83,31 +101,53 @@ def run(
             f"{folder}: this training was begun with seed {training.settings.seed}, not {seed}; "
             f"give --seed {training.settings.seed}, or begin anew in another folder"
         )
-    shelf = folder / "recordings"
-    make_shards(shelf, seed, range(HELD_OUT), held_out=True, processes=processes)
-    make_shards(shelf, seed, range(recordings), processes=processes)
-    held_out = [load_shard(shard_path(shelf, seed, index, held_out=True)) for index in range(HELD_OUT)]
-    crops = Crops([load_shard(shard_path(shelf, seed, index)) for index in range(recordings)])
+    first = round(recordings * FIRST_RECORDINGS)
+    made = partial(_made, seed, processes, progress)
+    crops, held_out = made(folder / "recordings", range(first))
     if training is None:
-        training = Training.begin(Settings(_steps_within(60 * minutes, crops), seed))
-        logger.info("%d steps of about %.0f ms", training.settings.steps, 6e4 * minutes / training.settings.steps)
+        steps = _steps_within(60 * minutes, crops)
+        training = Training.begin(Settings(steps, seed, first=round(steps * FIRST_STEPS)))
+        logger.info("%d steps of about %.0f ms", steps, 6e4 * minutes / steps)
+    refining = folder / "refining" / WEIGHTS
+    if training.step < training.settings.first:
+        fit(training, crops, held_out, folder, progress, until=training.settings.first)
+        write_weights(training.average, refining)
+        training.best = -math.inf
+    # Where it is used, the network gets keys that it has refined itself.
+    crops, held_out = made(folder / "recordings-refined", range(first, recordings), refining)
     fit(training, crops, held_out, folder, progress)
     lacking = {}
     if ablations:
-        steps = max(1, round(training.settings.steps * ablations / minutes))
-        lacking = measure_ablations(folder / "ablations", crops, held_out, steps, seed, progress)
-    return write_card(training, held_out, recordings, minutes, folder, lacking)
+        few = max(1, round(training.settings.steps * ablations / minutes))
+        lacking = measure_ablations(folder / "ablations", crops, held_out, few, seed, progress)
+    path = write_card(training, held_out, recordings, minutes, folder, lacking)
+    if trust:
+        run_trust(folder, path, recordings=trust, held_out=HELD_OUT, seed=seed, processes=processes, progress=progress)
+    return path
 
 
-def _steps_within(seconds: float, crops: object) -> int:
+def _made(
+    seed: int, processes: int, progress: Progress | None, shelf: Path, indices: range, weights: Path | None = None
+) -> tuple[Crops, list[Shard]]:
+    """Make recordings to fit on, and held-out ones; those that are there are used as they are."""
+    from enhance.train.data import load_shard, make_shards, shard_path
+    from enhance.train.fit import Crops
+
+    asked: dict[str, Any] = {"processes": processes, "weights": weights, "progress": progress}
+    make_shards(shelf, seed, range(HELD_OUT), held_out=True, **asked)
+    make_shards(shelf, seed, indices, **asked)
+    crops = Crops([load_shard(shard_path(shelf, seed, index)) for index in indices])
+    return crops, [load_shard(shard_path(shelf, seed, index, held_out=True)) for index in range(HELD_OUT)]
+
+
+def _steps_within(seconds: float, crops: Crops) -> int:
     """Time a few steps on a network that is thrown away."""
     import time
 
     import torch
 
-    from enhance.train.fit import Crops, Settings, Training, train_step
+    from enhance.train.fit import Settings, Training, train_step
 
-    assert isinstance(crops, Crops)
     trial = Training.begin(Settings(TIMED + BEFORE))
     torch.set_num_threads(trial.settings.threads)
     for _ in range(BEFORE):

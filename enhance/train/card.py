@@ -75,17 +75,29 @@ def write_card(
     """
     data = (folder / fit.BEST).read_bytes()
     path = folder / WEIGHTS
-    with whole_file(path) as partial:
-        partial.write_bytes(data)
-    # The checksum alone makes it loadable; the network that is scored is the one on the disk.
-    _write_json({"sha256": hashlib.sha256(data).hexdigest()}, path)
-    network = load_network(path)
+    # The network that is scored is the one on the disk.
+    network = _stored(data, path)
     card = describe(network, training, held_out, recordings, minutes) | {"sha256": hashlib.sha256(data).hexdigest()}
     card["ablations"] = dict(ablations or {})
     _write_json(card, path)
     with whole_file(path.with_suffix(".md")) as partial:
         partial.write_text(readable(card), encoding="utf-8")
     return path
+
+
+def write_weights(network: FusionNetwork, path: Path) -> None:
+    """Write a network with as much of a card as loading it needs."""
+    path.parent.mkdir(parents=True, exist_ok=True)
+    fit.save_weights(network, path)
+    _stored(path.read_bytes(), path)
+
+
+def _stored(data: bytes, path: Path) -> FusionNetwork:
+    with whole_file(path) as partial:
+        partial.write_bytes(data)
+    # The checksum alone makes it loadable.
+    _write_json({"sha256": hashlib.sha256(data).hexdigest()}, path)
+    return load_network(path)
 
 
 def _write_json(card: Mapping[str, Any], path: Path) -> None:
@@ -131,7 +143,8 @@ def describe(
         },
         "training": {
             "steps": training.step,
-            "kept_step": max(training.curve, key=lambda row: np.nansum([row["held_out_network"], row["keys_network"]]))["step"],
+            "first_steps": settings.first,
+            "kept_step": _kept_step(training),
             "batch": settings.batch,
             "rate": fit.RATE,
             "weight_decay": fit.WEIGHT_DECAY,
@@ -153,6 +166,12 @@ def describe(
         "limits": list(LIMITS),
         "command": f"enhance train FOLDER --minutes {minutes:g} --recordings {recordings} --seed {settings.seed}",
     }
+
+
+def _kept_step(training: fit.Training) -> float:
+    """Find the round whose weights are the best, among those judged on refined keys."""
+    judged = [row for row in training.curve if row["step"] > training.settings.first]
+    return max(judged, key=lambda row: np.nansum([row["held_out_network"], row["keys_network"]]))["step"]
 
 
 def _layers(network: FusionNetwork) -> list[dict[str, Any]]:
@@ -204,8 +223,10 @@ def readable(card: Mapping[str, Any]) -> str:
         "",
         f"{fitted['steps']} steps of {fitted['batch']} crops in {fitted['minutes']:g} minutes on {fitted['threads']} "
         f"thread; AdamW, rate {fitted['rate']:g} along a cosine, decay {fitted['weight_decay']:g}, weights averaged "
-        f"({fitted['averaged']:g}), those after step {fitted['kept_step']} kept; logarithm of each crop's Charbonnier "
-        f"error (softness {fitted['softness']:g}) in sRGB signal and in linear light alike. Again (steps are "
+        f"({fitted['averaged']:g}), those after step {fitted['kept_step']} kept. The first {fitted['first_steps']} "
+        "steps see keys as the double integral leaves them, the others other recordings, whose keys the network of "
+        "then has refined. The loss is the logarithm of each crop's Charbonnier error (softness "
+        f"{fitted['softness']:g}) in sRGB signal and in linear light alike. Again (steps are "
         "timed to fit the minutes, so another machine takes more or fewer):",
         "",
         f"    {card['command']}",

@@ -7,10 +7,10 @@ so that making them can be interrupted, and shared between processes.
 from __future__ import annotations
 
 import json
-import logging
 import zipfile
-from collections.abc import Iterator, Sequence
+from collections.abc import Callable, Iterable, Iterator, Sequence
 from concurrent.futures import ProcessPoolExecutor
+from contextlib import ExitStack
 from dataclasses import asdict, dataclass
 from functools import partial
 from multiprocessing import get_context
@@ -23,13 +23,11 @@ from numpy.typing import NDArray
 from enhance.clip.keys import Keys
 from enhance.clip.pictures import Pictures
 from enhance.interpolate import Candidates
-from enhance.interpolate.network import network_inputs
+from enhance.interpolate.network import FusionNetwork, load_network, network_inputs
 from enhance.rig import RiggedEvents
 from enhance.train.recipe import Rng, draw_recipe
 from enhance.train.spoil import Sample, record, signal
 from enhance.write.whole import whole_file
-
-logger = logging.getLogger(__name__)
 
 #: Side of a training crop, pixels.
 CROP = 96
@@ -62,13 +60,15 @@ class Shard:
     recipe: dict[str, Any]
 
 
-def make_shard(seed: int, index: int, held_out: bool = False) -> Shard:
+def make_shard(seed: int, index: int, held_out: bool = False, network: FusionNetwork | None = None) -> Shard:
     """Record, make keys and candidates, and keep what the network is fitted on.
 
     Parameters
     ----------
     seed, index, held_out
         As in `draw_recipe`.
+    network : FusionNetwork, optional
+        Fitted before: refines the keys that pictures are inserted between, as it will where it is used.
 
     Returns
     -------
@@ -79,7 +79,7 @@ def make_shard(seed: int, index: int, held_out: bool = False) -> Shard:
     sample = record(recipe, rng)
     frames = sample.recording.frames
     events = RiggedEvents(sample.recording.events, sample.rig, recipe.size)
-    pictures = Pictures(Keys(frames, range(len(frames)), events, sample.rig))
+    pictures = Pictures(Keys(frames, range(len(frames)), events, sample.rig, network))
     inputs, truth = [], []
     for time_us, key, candidates in _known(pictures, held_out, rng):
         known = network_inputs(candidates).astype(np.float16)
@@ -142,7 +142,15 @@ def shard_path(folder: Path, seed: int, index: int, held_out: bool = False) -> P
     return folder / f"{'held-out' if held_out else 'train'}-v{VERSION}-{seed}-{index:05d}.npz"
 
 
-def make_shards(folder: Path, seed: int, indices: Sequence[int], held_out: bool = False, processes: int = 1) -> None:
+def make_shards(
+    folder: Path,
+    seed: int,
+    indices: Sequence[int],
+    held_out: bool = False,
+    processes: int = 1,
+    weights: Path | None = None,
+    progress: Callable[[int, int, str], None] | None = None,
+) -> None:
     """Make the files of many recordings; those that are there already are kept.
 
     Parameters
@@ -153,31 +161,31 @@ def make_shards(folder: Path, seed: int, indices: Sequence[int], held_out: bool 
     indices : sequence of int
     processes : int
         Any number leaves the same files.
+    weights : Path, optional
+        Of the network that refines the keys.
+    progress : callable, optional
+        Called with recordings done, all of them, and words.
     """
     missing = [index for index in indices if not _is_whole(shard_path(folder, seed, index, held_out))]
-    work = partial(_write_shard, folder, seed, held_out)
-    if processes <= 1 or len(missing) <= 1:
-        done = map(work, missing)
-        for count, _ in enumerate(done, 1):
-            _tell(count, len(missing), held_out)
-        return
-    # A fresh process: a forked one would inherit locked thread pools.
-    with ProcessPoolExecutor(processes, mp_context=get_context("spawn")) as pool:
-        for count, _ in enumerate(pool.map(work, missing, chunksize=1), 1):
-            _tell(count, len(missing), held_out)
+    work = partial(_write_shard, folder, seed, held_out, weights)
+    what = "rendering held-out recordings" if held_out else "rendering recordings"
+    with ExitStack() as stack:
+        ready: Iterable[None] = map(work, missing)
+        if processes > 1 and len(missing) > 1:
+            # A fresh process: a forked one would inherit locked thread pools.
+            pool = stack.enter_context(ProcessPoolExecutor(processes, mp_context=get_context("spawn")))
+            ready = pool.map(work, missing, chunksize=1)
+        for done, _ in enumerate(ready, 1):
+            if progress:
+                progress(done, len(missing), what)
 
 
-def _tell(count: int, total: int, held_out: bool) -> None:
-    if count % 10 == 0 or count == total:
-        logger.info("rendered %d of %d %s recordings", count, total, "held-out" if held_out else "training")
-
-
-def _write_shard(folder: Path, seed: int, held_out: bool, index: int) -> None:
+def _write_shard(folder: Path, seed: int, held_out: bool, weights: Path | None, index: int) -> None:
     import cv2
 
     # One thread a process; the pictures are the same for any number.
     cv2.setNumThreads(1)
-    shard = make_shard(seed, index, held_out)
+    shard = make_shard(seed, index, held_out, load_network(weights) if weights else None)
     with whole_file(shard_path(folder, seed, index, held_out)) as partial_file, open(partial_file, "wb") as file:
         np.savez(file, inputs=shard.inputs, truth=shard.truth, recipe=np.array(json.dumps(shard.recipe)))
 

@@ -66,6 +66,8 @@ class Settings:
     round_steps : int
         Steps between two saved states.
     threads : int
+    first : int
+        Steps on keys as the double integral leaves them; after these, on keys that the network itself has refined.
     without : str
         What is kept from the network, one of `enhance.train.ablation.ABLATIONS`; nothing if empty.
     """
@@ -73,8 +75,9 @@ class Settings:
     steps: int
     seed: int = 1
     batch: int = 8
-    round_steps: int = 400
+    round_steps: int = 800
     threads: int = 1
+    first: int = 0
     without: str = ""
 
 
