@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Any
 
 import numpy as np
@@ -48,6 +48,7 @@ COLUMNS = (
     "sharpness",
     "sharpness_captured",
     "expected_psnr",
+    "expected_psnr_moving",
 )
 
 
@@ -101,7 +102,14 @@ def judge(pictures: Pictures, index: int) -> Judged:
     figures["sharpness"] = sharpness(_codes(sharp.image, light), light.full_scale, moving)
     figures["sharpness_captured"] = sharpness(reference, light.full_scale, moving)
     figures["expected_psnr"] = sharp.expected_psnr
+    figures["expected_psnr_moving"] = _expected_within(sharp, moving)
     return Judged(sharp, figures)
+
+
+def _expected_within(picture: Picture, pixels: NDArray[np.bool_] | None) -> float | None:
+    if picture.error is None or pixels is None or not pixels.any():
+        return None
+    return replace(picture, error=picture.error[pixels]).expected_psnr
 
 
 def _instants(pictures: Pictures, key: int, held: Frame, middle: Image) -> list[int]:

@@ -35,6 +35,7 @@ DEFINITIONS = {
     "pixel: the figures above are blind to sharpness along the motion",
     "sharpness_captured": "the same of the captured frame",
     "expected_psnr": "expected PSNR, as defined above, of the sharp picture made at the frame's middle",
+    "expected_psnr_moving": "as expected_psnr, over moving pixels",
 }
 EXPECTED = (
     "expected PSNR in dB against the sharp, noise-free truth, in code values of the frames' own curve, over the whole "
@@ -151,7 +152,7 @@ def held_out_summary(judged: Sequence[Judged], every: int) -> dict[str, Any]:
 
 
 def _ranked(rows: Sequence[dict[str, Any]], name: str) -> float | None:
-    pairs = [(row["expected_psnr"], row[name]) for row in rows]
+    pairs = [(row[f"expected_{name}"], row[name]) for row in rows]
     known = [pair for pair in pairs if None not in pair]
     return rank_correlation([a for a, _ in known], [b for _, b in known])
 

@@ -20,6 +20,7 @@ def test_the_order_expected_is_compared_with_the_order_measured() -> None:
     found = held_out_summary(
         judged(
             expected_psnr=[30.0, 31.0, 32.0, 33.0, 34.0],
+            expected_psnr_moving=[30.0, 31.0, 32.0, 33.0, 34.0],
             psnr=[20.0, 21.0, 25.0, 26.0, 40.0],
             psnr_moving=[19.0, 18.0, 17.0, 16.0, 15.0],
         ),
@@ -33,6 +34,7 @@ def test_pictures_without_one_of_the_two_are_left_out() -> None:
     found = held_out_summary(
         judged(
             expected_psnr=[30.0, 31.0, None, 32.0, 33.0, 34.0],
+            expected_psnr_moving=[30.0, 31.0, None, 32.0, 33.0, 34.0],
             psnr=[20.0, 21.0, 90.0, 25.0, 26.0, 40.0],
             psnr_moving=[None, 18.0, 17.0, 16.0, 15.0, 14.0],
         ),
