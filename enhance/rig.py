@@ -6,7 +6,7 @@ Every quantity carries its value, uncertainty, method and evidence. An unknown v
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
@@ -197,11 +197,6 @@ class RiggedEvents:
         )
         self.lost: NDArray[np.int64] = self.clock.to_frame(np.array(rig.lost.value or (), np.int64).reshape(-1, 2))
 
-    @staticmethod
-    def on_sensor(source: EventSource, rig: Rig) -> RiggedEvents:
-        """Events in the frame clock, bad pixels dropped, but on the sensor's own pixels."""
-        return RiggedEvents(source, replace(rig, registration=Quantity(np.eye(3).tolist()), **_NO_LENS), source.size)
-
     def between(self, start_us: int, end_us: int) -> Events:
         """Events of ``[start_us, end_us)`` of the frame clock."""
         events = self.source.between(self.clock.to_event(start_us), self.clock.to_event(end_us))
@@ -235,9 +230,6 @@ class RiggedEvents:
     def close(self) -> None:
         """Release the file."""
         self.source.close()
-
-
-_NO_LENS = {"frame_lens": Quantity(None), "event_lens": Quantity(None)}
 
 
 class _Spread:

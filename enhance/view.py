@@ -102,7 +102,7 @@ class View:
     def to_event(self, points: Array) -> Array:
         """Map frame pixels, shape (N, 2), to event pixels; NaN where they are seen nowhere."""
         ideal = self.frame_lens.undistort(points) if self.frame_lens else np.asarray(points, np.float64)
-        moved = project(np.linalg.inv(self.matrix), ideal)
+        moved = project(np.asarray(np.linalg.inv(self.matrix), np.float64), ideal)
         return self.event_lens.distort(moved) if self.event_lens else moved
 
     def pitch(self, sensor_size: tuple[int, int]) -> float:

@@ -3,7 +3,8 @@
 from enhance.calibrate.clipped import ClippedCount
 from enhance.calibrate.gain import find_gain
 from enhance.calibrate.levelled import LevelledFrames, as_tabled
-from enhance.calibrate.rig import calibrate, known_rig
+from enhance.calibrate.registered import calibrate
+from enhance.calibrate.rig import known_rig
 from enhance.calibrate.rig_file import read_rig, rig_text
 from enhance.calibrate.stripes import find_stripes
 

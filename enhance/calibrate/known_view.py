@@ -138,10 +138,7 @@ class FramesOnSensor:
         if clipped is not None:
             clipped = self._sampled(clipped.astype(np.float32), there) > 0
         # a row of the sensor is exposed when the row of the frame at its middle is
-        first, last = (
-            float(np.nanmean(np.where(row < 0, np.nan, row))) if (row >= 0).any() else 0.0
-            for row in (there[0, :, 1], there[-1, :, 1])
-        )
+        first, last = (_mean_row(row) for row in (there[0, :, 1], there[-1, :, 1]))
         shift = int(frame.row_time_us * first // 1)
         row_time_us = frame.row_time_us * (last - first) / max(self.size[1] - 1, 1)
         return replace(
@@ -157,10 +154,10 @@ class FramesOnSensor:
         """Pixel of the crop at each event pixel's centre, (H, W, 2); far outside where there is none."""
         width, height = self.size
         y, x = np.mgrid[:height, :width].reshape(2, -1).astype(np.float64)
-        there = self.view.to_frame(np.column_stack([x, y])) - self.frames.crop_origin
+        there = np.asarray(self.view.to_frame(np.column_stack([x, y])) - self.frames.crop_origin, np.float64)
         rows, columns = self.frames.shape[:2]
         with np.errstate(invalid="ignore"):
-            inside = ((there >= -0.5) & (there <= (columns - 0.5, rows - 0.5))).all(axis=1)
+            inside = np.asarray(((there >= -0.5) & (there <= (columns - 0.5, rows - 0.5))).all(axis=1))
         return np.where(inside[:, None], there, -99).astype(np.float32).reshape(height, width, 2)
 
     def _sampled(self, image: NDArray[np.float32], there: NDArray[np.float32]) -> NDArray[np.float32]:
@@ -168,10 +165,15 @@ class FramesOnSensor:
         # area of an event pixel, but for the area of a frame pixel that the samples have already
         wide = np.sqrt(max(0.0, pitch**2 - 1) / 12)
         smooth = cv2.GaussianBlur(image, (0, 0), wide) if wide > 0.2 else image
-        seen = np.asarray(cv2.remap(smooth, there, None, cv2.INTER_LINEAR, borderMode=cv2.BORDER_REPLICATE))
-        outside = there[..., 0] < -1
-        seen[outside] = 0
+        x, y = there[..., 0], there[..., 1]
+        seen = np.asarray(cv2.remap(smooth, x, y, cv2.INTER_LINEAR, borderMode=cv2.BORDER_REPLICATE), np.float32)
+        seen[x < -1] = 0
         return seen
+
+
+def _mean_row(rows: NDArray[np.float32]) -> float:
+    known = rows[rows > -1]
+    return float(known.mean()) if known.size else 0.0
 
 
 def on_sensor(recording: Recording, view: View) -> Recording:

@@ -225,7 +225,7 @@ def _shrunk(change: Map, by: int) -> Map:
         return change
     height, width = (n // by for n in change.shape)
     whole = change[: height * by, : width * by]
-    return np.asarray(cv2.resize(whole, (width, height), interpolation=cv2.INTER_AREA))
+    return np.asarray(cv2.resize(whole, (width, height), interpolation=cv2.INTER_AREA), np.float32)
 
 
 def _undistorting(lens: Lens, shape: tuple[int, ...]) -> Map:
@@ -236,4 +236,6 @@ def _undistorting(lens: Lens, shape: tuple[int, ...]) -> Map:
 
 
 def _undistorted(change: Map, undistorting: Map | None) -> Map:
-    return change if undistorting is None else np.asarray(cv2.remap(change, undistorting, None, cv2.INTER_LINEAR))
+    if undistorting is None:
+        return change
+    return np.asarray(cv2.remap(change, undistorting[..., 0], undistorting[..., 1], cv2.INTER_LINEAR), np.float32)

@@ -24,6 +24,7 @@ import cv2
 import numpy as np
 from numpy.typing import NDArray
 
+from enhance.calibrate.registration_search import blur
 from enhance.view import Lens, project
 
 Array = NDArray[np.float64]
@@ -124,17 +125,19 @@ def make_level(
     every = max(1, int(blur_px), int(np.ceil(np.sqrt(height * width / MOST_POINTS))))
     y, x = np.mgrid[:height:every, :width:every].reshape(2, -1).astype(np.float64)
     points = np.column_stack([x, y])
-    smooth = [cv2.GaussianBlur(each, (0, 0), wide) for each in frames]
-    along_x, along_y = (
-        [cv2.Sobel(each, cv2.CV_32F, *order, ksize=3, scale=1 / 8) for each in smooth] for order in ((1, 0), (0, 1))
-    )
+    smooth = [blur(each, wide) for each in frames]
+    along_x, along_y = ([_slope(each, *order) for each in smooth] for order in ((1, 0), (0, 1)))
     return Level(
         smooth,
         list(zip(along_x, along_y, strict=True)),
-        [cv2.GaussianBlur(each, (0, 0), blur_px)[::every, ::every] for each in events],
+        [blur(each, blur_px)[::every, ::every] for each in events],
         lens.undistort(points) if lens else points,
         blur_px,
     )
+
+
+def _slope(image: Map, along_x: int, along_y: int) -> Map:
+    return np.asarray(cv2.Sobel(image, cv2.CV_32F, along_x, along_y, ksize=3, scale=1 / 8), np.float32)
 
 
 def refine(level: Level, matrix: Array, terms: int = AFFINE) -> Fit:
@@ -191,7 +194,8 @@ def _all_sums(level: Level, matrix: Array) -> list[_Sums]:
     result = []
     for change, slopes, seen in zip(level.frames, level.slopes, level.events, strict=True):
         value, along_x, along_y = (
-            cv2.remap(each, maps, None, cv2.INTER_LINEAR).ravel()[inside] for each in (change, *slopes)
+            np.asarray(cv2.remap(each, maps[..., 0], maps[..., 1], cv2.INTER_LINEAR), np.float32).ravel()[inside]
+            for each in (change, *slopes)
         )
         result.append(_sums(value, (along_x, along_y), seen.ravel()[inside], there, solid, depth))
     return result
@@ -254,7 +258,7 @@ def _mean_move(level: Level, one: Array, two: Array) -> float:
         inside = ((there >= 0) & (there <= (width - 1, height - 1))).all(axis=1)
     if not inside.any():
         return float("inf")
-    back = project(np.linalg.inv(two), there[inside]) - points[inside]
+    back = project(np.asarray(np.linalg.inv(two), np.float64), there[inside]) - points[inside]
     return float(np.nan_to_num(np.hypot(*back.T), nan=1e6).mean())
 
 

@@ -64,7 +64,7 @@ def search(
     target = _Target(frames, shrink)
     found: list[Guess] = []
     for pitch in pitches or _steps():
-        blurred = [cv2.GaussianBlur(each, (0, 0), max(0.5, 0.8 / (pitch * shrink))) for each in events]
+        blurred = [blur(each, max(0.5, 0.8 / (pitch * shrink))) for each in events]
         for turn in _turns():
             found.append(target.best(blurred, turn * pitch))
     found.sort(key=lambda guess: -guess.correlation)
@@ -88,9 +88,9 @@ def _distinct(found: Sequence[Guess], shape: tuple[int, ...], width: int, most: 
     return kept
 
 
-def _steps() -> Array:
+def _steps() -> list[float]:
     low, high = PITCHES
-    return low * PITCH_STEP ** np.arange(int(np.log(high / low) / np.log(PITCH_STEP)) + 2)
+    return [low * PITCH_STEP**k for k in range(int(np.log(high / low) / np.log(PITCH_STEP)) + 2)]
 
 
 def _turns() -> Iterator[Array]:
@@ -106,9 +106,10 @@ class _Target:
     def __init__(self, frames: Sequence[Map], shrink: float) -> None:
         self.shrink = shrink
         # a shrunken map keeps the smooth part alone: nothing finer may fold back
-        blurred = [cv2.GaussianBlur(each, (0, 0), 0.8 / shrink) for each in frames]
+        blurred = [blur(each, 0.8 / shrink) for each in frames]
         self.shape = tuple(max(2, round(n * shrink)) for n in frames[0].shape)
-        small = [cv2.resize(each, self.shape[::-1], interpolation=cv2.INTER_AREA) for each in blurred]
+        width, height = self.shape[::-1]
+        small = [np.asarray(cv2.resize(e, (width, height), interpolation=cv2.INTER_AREA), np.float32) for e in blurred]
         self._maps = [_transformed(each) for each in small]
         self._squares = _transformed(np.sum(np.square(small), axis=0, dtype=np.float32))
         self._mask = _transformed(np.ones(self.shape, np.float32))
@@ -120,12 +121,11 @@ class _Target:
         matrix[:2, :2] = turn * self.shrink
         # the sensor's centre on the canvas'
         matrix[:2, 2] = (CANVAS - 1) / 2 - matrix[:2, :2] @ ((width - 1) / 2, (height - 1) / 2)
-        moved = [cv2.warpAffine(each, matrix[:2], (CANVAS, CANVAS)) for each in events]
-        mask = cv2.warpAffine(np.ones((height, width), np.float32), matrix[:2], (CANVAS, CANVAS))
-        spectra = [cv2.dft(each, flags=cv2.DFT_COMPLEX_OUTPUT) for each in moved]
-        cross = _back(sum(_times(m, s) for m, s in zip(self._maps, spectra, strict=True)))
-        over = cv2.dft(mask, flags=cv2.DFT_COMPLEX_OUTPUT)
-        squares = cv2.dft(np.sum(np.square(moved), axis=0, dtype=np.float32), flags=cv2.DFT_COMPLEX_OUTPUT)
+        moved = [_placed(each, matrix) for each in events]
+        mask = _placed(np.ones((height, width), np.float32), matrix)
+        spectra = [_times(m, _transformed(e)) for m, e in zip(self._maps, moved, strict=True)]
+        cross = _back(np.sum(spectra, axis=0))
+        over, squares = _transformed(mask), _transformed(np.sum(np.square(moved), axis=0, dtype=np.float32))
         energy = _back(_times(self._squares, over)), _back(_times(self._mask, squares))
         shared = _back(_times(self._mask, over))
         least = LEAST_SHARED * min(self.shape[0] * self.shape[1], float(mask.sum()))
@@ -137,7 +137,7 @@ class _Target:
         # the frame's corner stands at (column, row) of the canvas, counted round
         corner = [int(n) - CANVAS if n > CANVAS / 2 + CANVAS / 4 else int(n) for n in (column, row)]
         matrix[:2, 2] -= corner
-        return Guess(self._to_frame() @ matrix, float(value.max()))
+        return Guess(np.asarray(self._to_frame() @ matrix, np.float64), float(value.max()))
 
     def _to_frame(self) -> Array:
         """Pixel of the shrunken map to frame pixel."""
@@ -145,16 +145,25 @@ class _Target:
         return np.array([[s, 0, (s - 1) / 2], [0, s, (s - 1) / 2], [0, 0, 1]])
 
 
+def blur(image: Map, sigma: float) -> Map:
+    """Smooth a map by a Gaussian."""
+    return np.asarray(cv2.GaussianBlur(image, (0, 0), sigma), np.float32)
+
+
+def _placed(image: Map, matrix: Array) -> Map:
+    return np.asarray(cv2.warpAffine(image, matrix[:2], (CANVAS, CANVAS)), np.float32)
+
+
 def _transformed(image: Map) -> Map:
     canvas = np.zeros((CANVAS, CANVAS), np.float32)
     canvas[: image.shape[0], : image.shape[1]] = image
-    return np.asarray(cv2.dft(canvas, flags=cv2.DFT_COMPLEX_OUTPUT))
+    return np.asarray(cv2.dft(canvas, flags=cv2.DFT_COMPLEX_OUTPUT), np.float32)
 
 
 def _times(one: Map, two: Map) -> Map:
     """Correlate: where `one`, moved by the shift, lies on `two`."""
-    return np.asarray(cv2.mulSpectrums(two, one, 0, conjB=True))
+    return np.asarray(cv2.mulSpectrums(two, one, 0, conjB=True), np.float32)
 
 
 def _back(spectrum: Map) -> Map:
-    return np.asarray(cv2.dft(spectrum, flags=cv2.DFT_INVERSE | cv2.DFT_SCALE | cv2.DFT_REAL_OUTPUT))
+    return np.asarray(cv2.dft(spectrum, flags=cv2.DFT_INVERSE | cv2.DFT_SCALE | cv2.DFT_REAL_OUTPUT), np.float32)

@@ -44,5 +44,8 @@ class SecondView:
 
     def show(self, picture: Image) -> Image:
         """Light on the event pixels, (H, W) or (H, W, 3); beyond the picture's border it goes on as in a mirror."""
-        fine = cv2.remap(picture, self._map, None, cv2.INTER_LINEAR, borderMode=cv2.BORDER_REFLECT_101)
-        return fine if self._samples == 1 else cv2.resize(fine, self.size, interpolation=cv2.INTER_AREA)
+        x, y = self._map[..., 0], self._map[..., 1]
+        fine = cv2.remap(picture, x, y, cv2.INTER_LINEAR, borderMode=cv2.BORDER_REFLECT_101)
+        if self._samples > 1:
+            fine = cv2.resize(fine, self.size, interpolation=cv2.INTER_AREA)
+        return np.asarray(fine, np.float32)
