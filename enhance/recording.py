@@ -350,12 +350,21 @@ class FrameArray:
 
 
 @dataclass(frozen=True)
+class Triggers:
+    """When each frame's exposure was started: event clock, int64, shape (K,), rising; and corrections in words."""
+
+    times_us: NDArray[np.int64]
+    remarks: tuple[str, ...] = ()
+
+
+@dataclass(frozen=True)
 class Recording:
     """Frames and events of one scene, each in its own world; a `Rig` says how the two relate."""
 
     title: str
     frames: FrameSource
     events: EventSource
+    triggers: Triggers | None = None
 
 
 @dataclass(frozen=True)

@@ -92,12 +92,17 @@ class RigSettings:
         Thresholds (positive, negative).
     offset_us, drift_ppm : optional
         The clock, where it is given; ``shared`` clocks are 0 and 0.
+    row_time_us : float, optional
+        Of the frames' shutter: 0 for a global one, negative where rows are read upward; None: a rolling one whose row
+        time the rig file tells, or that is estimated.
     unknown : str
         ``stop`` or ``frames``: what to do where the clock cannot be told.
     registration : str or 3x3 nested tuple of float, optional
         ``shared``, ``estimate`` or the matrix from event pixels to whole-frame pixels; None: the file's, or shared.
     frame_lens, event_lens : Path, optional
         Lens files of an OpenCV calibration.
+    triggers : Path, optional
+        A table of the exposures' starts in the event clock: ``time_us``, one row a frame, or ``frame,time_us``.
     """
 
     file: Path | None = None
@@ -108,6 +113,8 @@ class RigSettings:
     registration: str | tuple[tuple[float, ...], ...] | None = None
     frame_lens: Path | None = None
     event_lens: Path | None = None
+    triggers: Path | None = None
+    row_time_us: float | None = 0.0
 
 
 @dataclass(frozen=True)

@@ -25,6 +25,7 @@ INPUTS: tuple[tuple[str, str], ...] = (
     ("frames", "dark"),
     ("events", "source"),
     ("rig", "file"),
+    ("rig", "clock.triggers"),
     ("rig", "registration.frame_lens"),
     ("rig", "registration.event_lens"),
 )
@@ -42,7 +43,11 @@ def mistakes_of_keys(document: Document) -> list[Mistake]:
     -------
     list of (key path, message)
     """
-    return [each for check in (_light, _cover, _grid, _windows, _hold_out, _trust) for each in check(document)]
+    return [
+        each
+        for check in (_light, _shutter, _cover, _grid, _windows, _hold_out, _trust, _triggers)
+        for each in check(document)
+    ]
 
 
 def mistakes_of_files(document: Document, job: Path) -> list[Mistake]:
@@ -83,6 +88,16 @@ def _light(document: Document) -> Iterator[Mistake]:
             ("frames", "white"),
             f"found {white}; full scale must be above black, which is {black or 0}. Write 255 for 8 bit frames, "
             f"65535 for 16 bit",
+        )
+
+
+def _shutter(document: Document) -> Iterator[Mistake]:
+    frames = document.get("frames")
+    if isinstance(frames, Mapping) and "row_time" in frames and frames.get("shutter", "global") == "global":
+        yield (
+            ("frames", "row_time"),
+            f"found {frames['row_time']!r}, but the shutter is global, whose rows are exposed together; write "
+            f'shutter = "rolling", or leave row_time out',
         )
 
 
@@ -132,6 +147,23 @@ def _windows(document: Document) -> Iterator[Mistake]:
                 f'starts at "{windows[second]["from"]}", before the window that ends at "{windows[first]["to"]}" is '
                 f"over; windows must not overlap",
             )
+
+
+def _triggers(document: Document) -> Iterator[Mistake]:
+    rig, clock = document.get("rig"), _get(document, "rig", "clock", Mapping)
+    if clock and "triggers" in clock and len(clock) > 1:
+        others = " and ".join(sorted(set(clock) - {"triggers"}))
+        yield (
+            ("rig", "clock"),
+            f"{others} beside triggers: the trigger table tells the whole clock; keep one and leave the other out",
+        )
+    if isinstance(rig, Mapping) and "triggers" in rig:
+        given = f'clock = "{rig["clock"]}"' if isinstance(rig.get("clock"), str) else "no clock"
+        yield (
+            ("rig", "triggers"),
+            f"a trigger table stands inside rig.clock, and goes with no other clock; found {given} beside it. Write "
+            'clock = { triggers = "triggers.csv" } alone, or leave the table out',
+        )
 
 
 def _hold_out(document: Document) -> Iterator[Mistake]:

@@ -118,7 +118,7 @@ def _settings(tables: JobTables, path: Path) -> ClipSettings:
             cover_us=(events.cover[0], events.cover[1]) if events.cover else None,
         ),
         output=_output(tables.output, folder),
-        rig=_rig(tables.rig, folder),
+        rig=_rig(tables.rig, tables.frames, folder),
         slow_motion=_slow_motion(tables.slow_motion) if tables.slow_motion else None,
         hold_out=tables.measure.hold_out,
         network=tables.network.use,
@@ -142,7 +142,7 @@ def _frames(table: FramesTable, folder: Path) -> FramesSettings:
     )
 
 
-def _rig(table: RigTable, folder: Path) -> RigSettings:
+def _rig(table: RigTable, frames: FramesTable, folder: Path) -> RigSettings:
     lenses = {
         name: folder / given
         for name in ("frame_lens", "event_lens")
@@ -151,11 +151,13 @@ def _rig(table: RigTable, folder: Path) -> RigSettings:
     return RigSettings(
         file=folder / table.file if table.file else None,
         contrast=table.contrast,
+        row_time_us=frames.row_time if frames.shutter == "rolling" else 0.0,
         offset_us=table.clock.offset if table.clock else None,
         drift_ppm=table.clock.drift_ppm if table.clock else None,
         unknown=table.unknown,
         registration=table.registration.matrix if table.registration else None,
         **lenses,
+        triggers=folder / table.clock.triggers if table.clock and table.clock.triggers else None,
     )
 
 

@@ -49,6 +49,7 @@ def input_digests(settings: ClipSettings) -> dict[str, dict[str, Any]]:
         "frames.dark": settings.frames.dark,
         "events.source": settings.events.source,
         "rig.file": settings.rig.file,
+        "rig.clock.triggers": settings.rig.triggers,
         "rig.registration.frame_lens": settings.rig.frame_lens,
         "rig.registration.event_lens": settings.rig.event_lens,
     }

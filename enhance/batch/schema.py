@@ -12,7 +12,7 @@ from typing import Annotated, Any, Literal, NoReturn
 
 from pydantic import AfterValidator, BaseModel, BeforeValidator, ConfigDict, Field, PlainValidator
 
-from enhance.clock import parse_duration
+from enhance.clock import parse_duration, parse_exact
 from enhance.light import check_curve
 
 #: A factor beyond this asks for more pictures than events can tell apart, and is a slip of the hand.
@@ -108,7 +108,9 @@ def _clock(value: Any) -> Any:
         return {"offset": "0 us", "drift_ppm": 0.0}
     if isinstance(value, dict) and value:
         return value
-    raise ValueError('expected { offset = "0 us", drift_ppm = 0.0 }, "shared" or "estimate"')
+    raise ValueError(
+        'expected { offset = "0 us", drift_ppm = 0.0 }, { triggers = "triggers.csv" }, "shared" or "estimate"'
+    )
 
 
 def _not_built(what: str, instead: str) -> NoReturn:
@@ -116,29 +118,31 @@ def _not_built(what: str, instead: str) -> NoReturn:
 
 
 def _shutter(value: Any) -> str:
-    if value == "rolling":
-        _not_built(
-            "a rolling shutter",
-            "every row would get a wrong time. Take frames of a global shutter, or leave the key out where nothing "
-            "moves by half a pixel between the first and the last row",
+    if value not in ("global", "rolling"):
+        raise ValueError(f'found {value!r}; expected "global" or "rolling"')
+    return str(value)
+
+
+def _row_time(value: Any) -> float | None:
+    if value == "estimate":
+        return None
+    if not isinstance(value, str):
+        unit = f"{value} us" if isinstance(value, int | float) and not isinstance(value, bool) else "14.8 us"
+        raise ValueError(
+            f'found {value!r}; expected the time from a row to the next with its unit, "{unit}", or "estimate"'
         )
-    if value != "global":
-        raise ValueError(f'found {value!r}; expected "global"')
-    return "global"
-
-
-def _row_time(_: Any) -> NoReturn:
-    _not_built("row_time, for a rolling shutter,", "leave it out and take frames of a global shutter")
+    row_time = float(parse_exact(value))
+    if row_time == 0:
+        raise ValueError(
+            f'found {value!r}; rows exposed at the same time are a global shutter: write shutter = "global"'
+        )
+    return row_time
 
 
 def _mosaic(value: Any) -> str:
     if value not in MOSAICS:
         raise ValueError(f"found {value!r}; expected {', '.join(MOSAICS[:-1])} or {MOSAICS[-1]}")
     return str(value)
-
-
-def _triggers(_: Any) -> NoReturn:
-    _not_built("a clock from trigger times", 'give the offset, clock = { offset = "0 us" }, or write "estimate"')
 
 
 def _registration(value: Any) -> Any:
@@ -197,7 +201,7 @@ class FramesTable(_Table):
     black: Number | None = None
     white: Number | None = None
     shutter: Annotated[str, PlainValidator(_shutter)] = "global"
-    row_time: Annotated[None, PlainValidator(_row_time)] = None
+    row_time: Annotated[float | None, PlainValidator(_row_time)] = None
     mosaic: Annotated[str, PlainValidator(_mosaic)] = "none"
     crop: Annotated[tuple[int, int, int, int], PlainValidator(_crop)] | None = None
     dark: Name | None = None
@@ -228,7 +232,7 @@ class ClockTable(_Table):
 
     offset: Duration | None = None
     drift_ppm: Number | None = None
-    triggers: Annotated[None, PlainValidator(_triggers)] = None
+    triggers: Name | None = None
 
 
 class RegistrationTable(_Table):

@@ -29,10 +29,13 @@ from enhance.calibrate.hot_pixels import find_hot_pixels
 from enhance.calibrate.known_view import known_view
 from enhance.calibrate.ramp import estimate_ramp
 from enhance.calibrate.rig_file import as_written, read_rig
+from enhance.calibrate.rolling import in_known_row_time, known_row_time
 from enhance.calibrate.steady import in_steady_light
+from enhance.calibrate.triggers import clock_from_triggers
 from enhance.errors import CalibrationError
 from enhance.recording import Contrast, Recording
 from enhance.rig import Quantity, Rig, RiggedEvents
+from enhance.rows import FrameEvents, events_in_row_time
 from enhance.settings import RigSettings
 
 #: How far the offset is sought around the one before, each time with better thresholds.
@@ -68,6 +71,9 @@ def calibrate(recording: Recording, keys: Sequence[int], settings: RigSettings) 
     recording = replace(recording, events=in_steady_light(recording.events, rig))
     if rig.hot_pixels.value is None:
         rig = replace(rig, hot_pixels=find_hot_pixels(recording.events))
+    rig, recording = in_known_row_time(rig, recording, keys, settings, _events, _first_guess(recording)[0])
+    if rig.row_time_us.value is None:
+        return as_written(_without_clock(rig))
     pairs = _covered(gather_pairs(recording.frames, keys), recording, rig)
     rig = _with_clock(rig, recording, pairs, keys, settings)
     if rig.offset_us.value is None:
@@ -78,7 +84,7 @@ def calibrate(recording: Recording, keys: Sequence[int], settings: RigSettings) 
         # Where the sensor did not record, a pixel without events need not be quiet.
         told = estimate_frame_noise(_covered(pairs, recording, rig), _events(recording, rig))
         rig = replace(rig, frame_noise=told)
-    return as_written(lamp_told(rig, recording.frames, keys, _events(recording, rig)))
+    return as_written(lamp_told(rig, recording.frames, keys, _placed(recording, rig)))
 
 
 def known_rig(recording: Recording, settings: RigSettings) -> Rig:
@@ -107,16 +113,23 @@ def known_rig(recording: Recording, settings: RigSettings) -> Rig:
         rig = replace(
             rig, contrast_positive=Quantity(settings.contrast[0]), contrast_negative=Quantity(settings.contrast[1])
         )
+    if recording.triggers is not None:
+        offset, drift = clock_from_triggers(recording.triggers, recording.frames, recording.events.first_us)
+        rig = replace(rig, offset_us=offset, drift_ppm=drift)
     if settings.offset_us is not None:
         rig = replace(rig, offset_us=Quantity(settings.offset_us))
     if settings.drift_ppm is not None:
         rig = replace(rig, drift_ppm=Quantity(settings.drift_ppm))
     if rig.drift_ppm.value is None:
         rig = replace(rig, drift_ppm=Quantity(0.0, None, "assumed", "not looked for: the offset is given without it"))
-    return known_view(rig, recording, settings)
+    return known_row_time(known_view(rig, recording, settings), recording, settings)
 
 
-def _events(recording: Recording, rig: Rig) -> RiggedEvents:
+def _events(recording: Recording, rig: Rig) -> FrameEvents:
+    return events_in_row_time(_placed(recording, rig), rig.row_time_us.value, recording.frames.shape[0])
+
+
+def _placed(recording: Recording, rig: Rig) -> RiggedEvents:
     frames = recording.frames
     height, width = frames.shape[:2]
     events = in_steady_light(recording.events, rig)
@@ -168,7 +181,7 @@ def _with_drift(rig: Rig, recording: Recording, parts: list[Sequence[int]], numb
     frames = recording.frames
     span = span_us(frames, [key for part in parts for key in part])
 
-    def events_at(offset_us: int) -> RiggedEvents:
+    def events_at(offset_us: int) -> FrameEvents:
         return _events(recording, replace(rig, offset_us=Quantity(offset_us)))
 
     marks = track(frames, parts, (number, int(rig.offset_us.value)), events_at, contrast)
@@ -210,7 +223,7 @@ def _refined(rig: Rig, recording: Recording, pairs: list[Pair], first_us: int, r
 def _contrast(rig: Rig, recording: Recording, pairs: list[Pair]) -> Contrast:
     """Thresholds as far as they are known or can be told with this clock, for the search of the clock itself."""
     ramp_us = int(rig.ramp_us.value)
-    found = [rig.contrast_positive.value, rig.contrast_negative.value]
+    found = [value and value / rig.parts for value in (rig.contrast_positive.value, rig.contrast_negative.value)]
     if None in found:
         told = estimate_contrast(_covered(pairs, recording, rig), _events(recording, rig), ramp_us)
         found = [known or q.value or s for known, q, s in zip(found, told, START, strict=True)]
@@ -234,12 +247,20 @@ def _with_contrast(rig: Rig, recording: Recording, pairs: list[Pair]) -> Rig:
     for name, quantity in found.items():
         if getattr(rig, name).value is not None:
             continue
+        quantity = _of_whole_thresholds(quantity, rig.parts)
         if quantity.value is None:
             quantity = Quantity(
                 START[0], None, "assumed", f"cannot be told ({quantity.evidence}); a common value was taken"
             )
         rig = _with(rig, name, quantity)
     return rig
+
+
+def _of_whole_thresholds(quantity: Quantity, parts: int) -> Quantity:
+    if parts == 1 or quantity.value is None:
+        return quantity
+    uncertainty = None if quantity.uncertainty is None else parts * quantity.uncertainty
+    return replace(quantity, value=parts * quantity.value, uncertainty=uncertainty)
 
 
 def _without_clock(rig: Rig) -> Rig:

@@ -7,7 +7,8 @@ from contextlib import contextmanager
 
 import numpy as np
 
-from enhance.read import open_events, open_frames
+from enhance.calibrate import in_steady_light
+from enhance.read import open_events, open_frames, read_triggers
 from enhance.recording import FrameSource, Recording
 from enhance.rig import Rig, RiggedEvents
 from enhance.settings import ClipSettings
@@ -39,7 +40,8 @@ def opened(settings: ClipSettings) -> Iterator[Recording]:
     try:
         events = open_events(settings.events, frames.full_size)
         try:
-            yield Recording(settings.title, frames, events)
+            pulses = settings.rig.triggers
+            yield Recording(settings.title, frames, events, read_triggers(pulses, frames) if pulses else None)
         finally:
             events.close()
     finally:
@@ -51,9 +53,8 @@ def events_on_frames(recording: Recording, rig: Rig) -> RiggedEvents | None:
     if rig.offset_us.value is None:
         return None
     height, width = recording.frames.shape[:2]
-    return RiggedEvents(
-        recording.events, rig, (width, height), recording.frames.crop_origin, recording.frames.full_size
-    )
+    events = in_steady_light(recording.events, rig)
+    return RiggedEvents(events, rig, (width, height), recording.frames.crop_origin, recording.frames.full_size)
 
 
 def light_remarks(frames: FrameSource) -> tuple[str, ...]:

@@ -3,15 +3,18 @@
 ::
 
     open_frames   image folder or video, with exact times   (frames.py; frame_images.py, frame_video.py, frame_times.py)
+    read_triggers when each frame's exposure was started, in the event clock   (trigger_table.py)
     open_events   HDF5, NPZ, text or Parquet, by time window (events.py; one file a container: event_hdf5.py ...)
 """
 
 from __future__ import annotations
 
-from enhance.recording import EventSource, FrameSource
+from pathlib import Path
+
+from enhance.recording import EventSource, FrameSource, Triggers
 from enhance.settings import EventsSettings, FramesSettings
 
-__all__ = ["open_events", "open_frames"]
+__all__ = ["open_events", "open_frames", "read_triggers"]
 
 
 def open_frames(settings: FramesSettings) -> FrameSource:
@@ -67,3 +70,27 @@ def open_events(settings: EventsSettings, frame_size: tuple[int, int]) -> EventS
     from enhance.read.events import open_event_source
 
     return open_event_source(settings, frame_size)
+
+
+def read_triggers(path: Path, frames: FrameSource) -> Triggers:
+    """Read a table of trigger pulses.
+
+    Parameters
+    ----------
+    path : Path
+        Header ``frame,time_us``, or ``time_us`` alone in the frames' order; microseconds of the event clock.
+    frames : FrameSource
+
+    Returns
+    -------
+    Triggers
+        One pulse a frame.
+
+    Raises
+    ------
+    FramesError
+        If a pulse is missing or doubled, or the table cannot be that of these frames.
+    """
+    from enhance.read.trigger_table import read_triggers as read
+
+    return read(path, frames)

@@ -57,6 +57,11 @@ class Simulated:
     seed: int
     duration_us: int
 
+    @property
+    def triggers_us(self) -> NDArray[np.int64]:
+        """When each exposure was started, in the event clock, shape (K,): what a trigger table would hold."""
+        return np.array([self.clock.to_event(int(start)) for start in self.recording.frames.start_us], dtype=np.int64)
+
     def truth(self, t_us: float) -> Image:
         """Sharp, noise-free linear image at a time of the frame clock, under steady light; (H, W) or (H, W, 3).
 
