@@ -16,6 +16,9 @@ from enhance.clock import ClockMap
 from enhance.recording import Contrast, Events, EventSource
 from enhance.view import Lens, View, shared_view
 
+#: Under a flickering lamp pixels tell more often than thresholds are crossed: without it, halves of one are told.
+STEADY_PARTS = 2
+
 
 @dataclass(frozen=True)
 class Quantity:
@@ -72,6 +75,8 @@ class Rig:
         Value: list of [x, y] in sensor pixels that never tell anything.
     flicker_hz, flicker_depth, flicker_phase : Quantity
         A lamp whose light is ``1 + depth * sin(2 pi f (t - t_first_event) + phase)``, event clock; None: none found.
+    flicker_in_frames : Quantity
+        1 where the frames grow brighter and darker with it, 0 where they do not.
     lost : Quantity
         Value: list of [start, end], event clock, in which events are missing. Of this recording alone, in no rig file.
     """
@@ -94,6 +99,7 @@ class Rig:
     flicker_phase: Quantity = Quantity(None, None, "assumed", "not looked for")
     stripes: Quantity = Quantity(None, None, "assumed", "not looked for")
     brightness: Quantity = Quantity(None, None, "assumed", "not looked for")
+    flicker_in_frames: Quantity = Quantity(None, None, "assumed", "not looked for")
     lost: Quantity = Quantity((), None, "assumed", "not looked for")
 
     @property
@@ -106,15 +112,20 @@ class Rig:
 
     @property
     def contrast(self) -> Contrast:
-        """What one event means; the thresholds must be known."""
+        """What one event means, as `RiggedEvents` gives them; the thresholds must be known."""
         view = self.view
         pitch = 1.0 if view is None or view.shift is not None else max(1.0, view.pitch(self.sensor_size))
         return Contrast(
-            float(self.contrast_positive.value),
-            float(self.contrast_negative.value),
+            float(self.contrast_positive.value) / self.parts,
+            float(self.contrast_negative.value) / self.parts,
             int(self.ramp_us.value or 0),
             pitch,
         )
+
+    @property
+    def parts(self) -> int:
+        """How many events stand for a threshold: more than 1 where a lamp's flicker is taken out of them."""
+        return 1 if self.flicker_hz.value is None else STEADY_PARTS
 
     def noise(self, light: NDArray[np.float32]) -> NDArray[np.float32]:
         """Give the standard deviation of the frames' noise at some light, any shape, linear with 1 = full scale."""

@@ -62,10 +62,22 @@ class Lamp:
         return np.asarray(np.tensordot(np.concatenate([self.cosine, self.sine]), waves, axes=1), dtype=np.float64)
 
     def turned(self, radians: float) -> Lamp:
-        """The same cycle, ahead by an angle of the fundamental."""
+        """Turn the cycle ahead by an angle of the fundamental."""
         harmonic = radians * np.arange(1, HARMONICS + 1)
         moved = (self.cosine - 1j * self.sine) * np.exp(1j * harmonic)
         return replace(self, cosine=moved.real, sine=-moved.imag)
+
+    @property
+    def phase(self) -> float:
+        """Of the fundamental as a sine, at the origin, radians."""
+        return float(np.arctan2(self.cosine[0], self.sine[0]))
+
+    @property
+    def harmonics_text(self) -> str:
+        """How strong the multiples of the fundamental are."""
+        strength = np.hypot(self.cosine, self.sine)
+        shares = ", ".join(f"{share:.0%}" for share in strength[1:] / max(strength[0], 1e-9))
+        return f"multiples of its frequency {shares} of it"
 
     @property
     def swing(self) -> float:

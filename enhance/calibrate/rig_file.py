@@ -26,9 +26,15 @@ SECTIONS = {
     "ramp_us": "contrast.ramp_us",
     "hot_pixels": "pixels.hot",
     "frame_noise": "frames.noise",
+    "row_time_us": "frames.row_time_us",
     "registration": "registration.matrix",
     "frame_lens": "registration.frame_lens",
     "event_lens": "registration.event_lens",
+    "dead_pixels": "pixels.dead",
+    "flicker_hz": "flicker.frequency_hz",
+    "flicker_depth": "flicker.depth",
+    "flicker_phase": "flicker.phase",
+    "flicker_in_frames": "flicker.in_frames",
 }
 #: Sections that are written for people and not read back: they are of one recording, and are found anew in each.
 OWN = {"stripes": "frames.stripes", "brightness": "frames.brightness"}
@@ -111,10 +117,12 @@ def read_rig(path: Path, sensor_size: tuple[int, int]) -> Rig:
             f"(width, height); use the file measured on this sensor"
         )
     quantities = {name: _quantity(document, name, section, path) for name, section in SECTIONS.items()}
-    outside = [p for p in quantities["hot_pixels"].value or [] if p[0] >= sensor_size[0] or p[1] >= sensor_size[1]]
+    bad = [(name, p) for name in ("hot_pixels", "dead_pixels") for p in quantities[name].value or []]
+    outside = [(name, p) for name, p in bad if p[0] >= sensor_size[0] or p[1] >= sensor_size[1]]
     if outside:
         raise CalibrationError(
-            f"{path}, [{SECTIONS['hot_pixels']}]: pixel {outside[0]} lies outside the sensor of {list(sensor_size)}; "
+            f"{path}, [{SECTIONS[outside[0][0]]}]: pixel {outside[0][1]} lies outside the sensor of "
+            f"{list(sensor_size)}; "
             f"expected 0 <= x < width and 0 <= y < height; mend the file or measure the rig anew"
         )
     return Rig(sensor_size=sensor_size, **quantities)
@@ -159,6 +167,25 @@ _EXPECTED = {
     "registration": "three rows of three numbers that are no singular matrix",
     "frame_lens": "fx, fy, cx, cy and 4, 5, 8, 12 or 14 coefficients",
     "event_lens": "fx, fy, cx, cy and 4, 5, 8, 12 or 14 coefficients",
+    "dead_pixels": "a list of [x, y]",
+    "row_time_us": "microseconds, -100000 to 100000",
+    "flicker_hz": "hertz, 20 to 5000",
+    "flicker_depth": "a number from 0 to 1",
+    "flicker_phase": "radians, -7 to 7",
+    "flicker_in_frames": "0 or 1",
+}
+
+
+#: Lowest and highest of what is one number.
+_BOUNDS = {
+    "drift_ppm": (-1000.0, 1000.0),
+    "contrast_positive": (0.01, 2.0),
+    "contrast_negative": (0.01, 2.0),
+    "row_time_us": (-1e5, 1e5),
+    "flicker_hz": (20.0, 5000.0),
+    "flicker_depth": (0.0, 1.0),
+    "flicker_phase": (-7.0, 7.0),
+    "flicker_in_frames": (0.0, 1.0),
 }
 
 
@@ -166,10 +193,8 @@ def _sound(name: str, value: Any) -> bool:
     number = isinstance(value, (int, float)) and not isinstance(value, bool)
     if name == "offset_us":
         return isinstance(value, int) and number
-    if name == "drift_ppm":
-        return number and abs(value) <= 1000
-    if name.startswith("contrast"):
-        return number and 0.01 <= value <= 2
+    if name in _BOUNDS:
+        return number and _BOUNDS[name][0] <= value <= _BOUNDS[name][1]
     if name == "ramp_us":
         return isinstance(value, int) and number and value >= 0
     if not isinstance(value, list):

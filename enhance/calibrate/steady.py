@@ -12,17 +12,25 @@ from numpy.typing import NDArray
 from enhance.calibrate.flicker import Lamp, fit_lamp, look_windows
 from enhance.kernels.flicker import long_differences, steady_steps
 from enhance.recording import Events, EventSource
+from enhance.rig import STEADY_PARTS, Rig
 
 #: Length of the pieces the events are worked on in, and how far before each the pixels' state is run in.
 PIECE_US, RUN_IN_US = 250_000, 150_000
-#: Share of a threshold at which a step is told, and time in which what is left of one fades.
-EARLY, FORGET_US = 0.75, 60_000.0
+#: Time in which what is left of a threshold fades, and how long before an event its change began at the most.
+FORGET_US, REACH_US = 60_000.0, 20_000.0
 #: Pieces kept.
 KEPT = 3
 #: Counts that the lamp's full share, and the recording's usual ratio of thresholds, are worth at a pixel.
 SHARE_PRIOR, RATIO_PRIOR = 4.0, 12.0
 #: A pixel that follows the lamp less than this does not see it; no pixel follows it more than this.
 LEAST_SHARE, MOST_SHARE = 0.25, 1.3
+
+
+def in_steady_light(source: EventSource, rig: Rig) -> EventSource:
+    """Take a lamp's flicker out of events, where the rig knows of one; else they stay as they are."""
+    if rig.flicker_hz.value is None or isinstance(source, SteadyEvents):
+        return source
+    return SteadyEvents(source, float(rig.flicker_hz.value))
 
 
 @dataclass(frozen=True)
@@ -77,11 +85,11 @@ class SteadyEvents:
         self._source.close()
 
     def lamp_at(self, time_us: int) -> Lamp:
-        """The lamp with the phase it has around an instant: mains wander."""
+        """Give the lamp the phase it has around an instant: mains wander."""
         piece = min(max(time_us, self.first_us), self.last_us) // PIECE_US
         if piece not in self._lamps:
             start = piece * PIECE_US
-            near = self._source.between(start - RUN_IN_US, start + PIECE_US)
+            near = self._source.between(start - RUN_IN_US, start + PIECE_US + int(REACH_US))
             self._lamps[piece] = self._tracked(near)
         return self._lamps[piece]
 
@@ -91,7 +99,7 @@ class SteadyEvents:
     def _piece(self, piece: int) -> Events:
         if piece not in self._pieces:
             start = piece * PIECE_US
-            near = self._source.between(start - RUN_IN_US, start + PIECE_US)
+            near = self._source.between(start - RUN_IN_US, start + PIECE_US + int(REACH_US))
             self._lamps.setdefault(piece, self._tracked(near))
             self._pieces[piece] = self._steady(near, self._lamps[piece]).between(start, start + PIECE_US)
             while len(self._pieces) > KEPT:
@@ -99,7 +107,7 @@ class SteadyEvents:
         return self._pieces[piece]
 
     def _tracked(self, near: Events) -> Lamp:
-        """The recording's lamp, its phase as these events have it."""
+        """Give the recording's lamp the phase that these events have."""
         one, _ = fit_lamp([near], self.lamp.frequency_hz, self.size) if len(near) else (self.lamp, None)
         here, usual = (one.cosine[0] - 1j * one.sine[0]), (self.lamp.cosine[0] - 1j * self.lamp.sine[0])
         if abs(here) < 0.3 * abs(usual):
@@ -112,19 +120,19 @@ class SteadyEvents:
         if not len(near):
             return near
         first, width = int(near.t_us[0]), self.size[0]
-        pixel = near.y.astype(np.int64) * width + near.x
-        index, polarity = steady_steps(
+        t_us, pixel, polarity = steady_steps(
             near.t_us - first,
-            pixel,
+            near.y.astype(np.int64) * width + near.x,
             near.polarity,
             lamp.level(near.t_us),
             self._pixels.share,
             self._pixels.thresholds,
-            (1.0, lamp.ratio),
-            EARLY,
+            (1.0 / STEADY_PARTS, lamp.ratio / STEADY_PARTS),
             FORGET_US,
+            REACH_US,
         )
-        return Events(near.t_us[index], near.x[index], near.y[index], polarity)
+        y, x = np.divmod(pixel, width)
+        return Events(t_us + first, x.astype(np.uint16), y.astype(np.uint16), polarity)
 
     def _seen_by(self, blocks: Sequence[Events], phases: NDArray[np.float64]) -> _Pixels:
         """How each pixel sees the lamp, from the windows looked at."""
