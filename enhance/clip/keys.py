@@ -14,6 +14,7 @@ from typing import TYPE_CHECKING, TypeVar
 import numpy as np
 from numpy.typing import NDArray
 
+from enhance.calibrate import evenly_lit
 from enhance.clock import middle_us
 from enhance.deblur import (
     WINDOW,
@@ -86,7 +87,7 @@ class Keys:
         trust: TrustModel | None = None,
     ) -> None:
         row_time, height = float(rig.row_time_us.value or 0), frames.shape[0]
-        self.frames = frames_in_row_time(frames, row_time)
+        self.frames = frames_in_row_time(evenly_lit(frames, events, rig), row_time)
         self.indices, self.events, self.rig = list(indices), events, rig
         # For what is compared with a frame's own exposure; between pictures of one instant the scene's own time holds.
         self._rowed = None if events is None else events_in_row_time(events, row_time, height)
