@@ -79,6 +79,8 @@ class Rig:
         1 where the frames grow brighter and darker with it, 0 where they do not.
     lost : Quantity
         Value: list of [start, end], event clock, in which events are missing. Of this recording alone, in no rig file.
+    clock_check : Quantity
+        What a given clock lacks, microseconds, with a remark where that is to be told. Of this recording alone.
     """
 
     offset_us: Quantity
@@ -101,6 +103,7 @@ class Rig:
     brightness: Quantity = Quantity(None, None, "assumed", "not looked for")
     flicker_in_frames: Quantity = Quantity(None, None, "assumed", "not looked for")
     lost: Quantity = Quantity((), None, "assumed", "not looked for")
+    clock_check: Quantity = Quantity(None, None, "assumed", "not looked for")
 
     @property
     def view(self) -> View | None:

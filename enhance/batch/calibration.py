@@ -68,6 +68,8 @@ def rig_lines(rig: Rig) -> Iterator[str]:
     """
     yield _line("clock offset", rig.offset_us, "us")
     yield _line("clock drift", rig.drift_ppm, "ppm")
+    if rig.clock_check.value is not None and rig.clock_check.evidence:
+        yield f"caution: {rig.clock_check.evidence}"
     yield _line("positive threshold", rig.contrast_positive)
     yield _line("negative threshold", rig.contrast_negative)
     yield _line("hot pixels", replace(rig.hot_pixels, value=len(rig.hot_pixels.value or [])))

@@ -31,6 +31,7 @@ from enhance.calibrate.ramp import estimate_ramp
 from enhance.calibrate.rig_file import as_written, read_rig
 from enhance.calibrate.rolling import in_known_row_time, known_row_time
 from enhance.calibrate.steady import in_steady_light
+from enhance.calibrate.time_marks import check_clock, edge_of_offset
 from enhance.calibrate.triggers import clock_from_triggers
 from enhance.errors import CalibrationError
 from enhance.recording import Contrast, Recording
@@ -75,11 +76,14 @@ def calibrate(recording: Recording, keys: Sequence[int], settings: RigSettings) 
     if rig.row_time_us.value is None:
         return as_written(_without_clock(rig))
     pairs = _covered(gather_pairs(recording.frames, keys), recording, rig)
+    given = rig.offset_us.value is not None
     rig = _with_clock(rig, recording, pairs, keys, settings)
     if rig.offset_us.value is None:
         return _without_clock(rig)
     if rig.contrast_positive.value is None or rig.contrast_negative.value is None:
         rig = _with_contrast(rig, recording, pairs)
+    if given:
+        rig = replace(rig, clock_check=check_clock(pairs, _events(recording, rig), rig.contrast))
     if rig.frame_noise.value is None:
         # Where the sensor did not record, a pixel without events need not be quiet.
         told = estimate_frame_noise(_covered(pairs, recording, rig), _events(recording, rig))
@@ -217,7 +221,9 @@ def _refined(rig: Rig, recording: Recording, pairs: list[Pair], first_us: int, r
         contrast = _contrast(rig, recording, pairs)
     _, uncertainty, correlation = found
     evidence = f"{remark}correlation {correlation:.3f} over {len(pairs)} pairs of keys"
-    return replace(rig, offset_us=Quantity(rig.offset_us.value, uncertainty, METHOD, evidence))
+    offset = Quantity(rig.offset_us.value, uncertainty, METHOD, evidence)
+    edge = edge_of_offset(offset, int(np.median([pair.first.exposure_us for pair in pairs])))
+    return replace(rig, offset_us=replace(offset, evidence=f"{evidence}; {edge}") if edge else offset)
 
 
 def _contrast(rig: Rig, recording: Recording, pairs: list[Pair]) -> Contrast:
