@@ -102,6 +102,11 @@ class Keys:
     def __len__(self) -> int:
         return len(self.indices)
 
+    @property
+    def seen(self) -> NDArray[np.bool_] | None:
+        """Pixels the event sensor looks at, (H, W); None: all of them."""
+        return None if self.events is None else self.events.seen
+
     def covered(self, key: int) -> bool:
         """Whether the events cover the key's exposure."""
         index = self.indices[key]
@@ -285,7 +290,8 @@ class Keys:
             if self._rowed is None or not self._rowed.covers(*interval):
                 return Evidence(np.zeros(shape), np.full(shape, _UNSEEN))
             events = self._near(*interval, self._rowed)
-            return change_evidence(events, interval, self.rig.contrast, (shape[0], shape[1]))
+            told = change_evidence(events, interval, self.rig.contrast, (shape[0], shape[1]))
+            return told if self.seen is None else Evidence(told.value, np.where(self.seen, told.weight, _UNSEEN))
 
         return remember(self._kept.change, key, make, _KEPT)
 

@@ -8,6 +8,9 @@ from pathlib import Path
 from types import TracebackType
 from typing import Any
 
+import numpy as np
+from numpy.typing import NDArray
+
 from enhance.clip.held_out import COLUMNS, Judged
 from enhance.clip.plan import Plan, Planned
 from enhance.clip.quality import Expected
@@ -20,6 +23,7 @@ from enhance.write import (
     caption_line,
     cautions,
     write_json,
+    write_overlap,
     write_still,
     write_table,
     write_text,
@@ -86,6 +90,12 @@ class Outputs:
     def held_out_picture(self, judged: Judged) -> None:
         """Write the picture made in place of a held-out frame."""
         self._write_still(f"held-out/{judged.picture.time_us:016d}.png", judged.picture)
+
+    def overlap(self, seen: NDArray[np.bool_] | None) -> None:
+        """Write which part of the pictures the events tell of, where it is not all."""
+        if seen is not None:
+            write_overlap(self.folder / "overlap.png", seen)
+            self.files.append("overlap.png")
 
     def table(self, name: str, header: tuple[str, ...], rows: list[tuple[Any, ...]]) -> None:
         """Write a table."""

@@ -183,6 +183,7 @@ def _run(recording: Recording, settings: ClipSettings, state: _Progress) -> Clip
     state.total = len(plan.pictures) + len(held)
     with Outputs(settings, recording.frames, plan) as outputs:
         outputs.text("rig.toml", rig_text(rig))
+        outputs.overlap(keys.seen)
         with state.stage("pictures"):
             counts, sharp = _deliver(Pictures(keys), plan, outputs, state)
     if settings.least_psnr is not None:
@@ -200,8 +201,17 @@ def _run(recording: Recording, settings: ClipSettings, state: _Progress) -> Clip
         else:
             figures["held_out"] = None
     outputs.record("quality.json", figures)
-    notes = (*_notes(recording, rig, plan, counts), *_trust_notes(settings, outputs))
+    notes = (*_notes(recording, rig, plan, counts), *_overlap_notes(keys), *_trust_notes(settings, outputs))
     return ClipResult(tuple(outputs.files), dict(counts), notes, figures, state.timings)
+
+
+def _overlap_notes(keys: Keys) -> list[str]:
+    if keys.seen is None:
+        return []
+    return [
+        f"the event sensor looks at {keys.seen.mean():.1%} of the picture (overlap.png): elsewhere keys stay as "
+        f"captured and inserted pictures are made from the frames alone"
+    ]
 
 
 def _trust_notes(settings: ClipSettings, outputs: Outputs) -> list[str]:

@@ -9,6 +9,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from enhance.clip.keys import Keys, fused, remember
+from enhance.clip.overlap import outside_by_frames
 from enhance.interpolate import Span, with_colour
 from enhance.interpolate.trust import frame_cause_maps
 from enhance.kernels.optical_flow import flow_between, moved_sides
@@ -55,7 +56,9 @@ class Pictures:
         candidates = span.at(time_us)
         made = fused(self.keys.network, candidates)
         error = self.keys.expected_error("inserted", made, candidates, (key,))
-        return Picture(with_colour(made.light, span, candidates), time_us, Kind.INSERTED, made.by, error)
+        picture = Picture(with_colour(made.light, span, candidates), time_us, Kind.INSERTED, made.by, error)
+        seen = self.keys.seen
+        return picture if seen is None else outside_by_frames(picture, self._by_frames(key, time_us), seen)
 
     def span(self, key: int) -> Span:
         """Prepare the span from a key to the next, which the events must cover."""

@@ -1,6 +1,7 @@
 """Video, stills, tables and records; each file appears whole or not at all."""
 
 from enhance.write import cautions
+from enhance.write.overlap import write_overlap
 from enhance.write.stills import write_still
 from enhance.write.strip import caption_line
 from enhance.write.tables import write_json, write_table, write_text
@@ -15,6 +16,7 @@ __all__ = [
     "probe_folder",
     "whole_file",
     "write_json",
+    "write_overlap",
     "write_still",
     "write_table",
     "write_text",
