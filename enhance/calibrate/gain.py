@@ -14,10 +14,10 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from enhance.calibrate.clipped import ClippedCount, tells_light
+from enhance.calibrate.clipped import USABLE_LIGHT, ClippedCount, tells_light
 from enhance.kernels.double_integral import log_blur_ratio
 from enhance.kernels.event_integral import event_counts
-from enhance.light import luma
+from enhance.light import Image, luma
 from enhance.recording import Contrast, EventSource, Frame, FrameSource
 from enhance.rig import Quantity
 
@@ -29,8 +29,11 @@ LEAST_STEP = 0.02
 #: Parts of the picture, rows and columns, pixels each needs, and the least number and share that must agree with the
 #: whole, within a part of the step or this much.
 PARTS, PART_PIXELS, LEAST_PARTS, AGREEING, APART, APART_SHARE = 4, 40, 3, 0.7, 0.01, 0.2
-#: Quiet pixels that are needed; where they are fewer, all pixels count, less what their events explain.
-LEAST_QUIET = 400
+#: Quiet pixels that are needed; where they are fewer, all pixels count, less what their events explain. Of the quiet
+#: ones this share counts that is flattest: an edge creeps by up to a threshold without any event.
+LEAST_QUIET, FLATTEST = 400, 0.3
+#: Pixels kept away from any event, the more the better: light creeps beside an edge that fires.
+MARGINS = (21, 11, 3)
 #: Frames further apart are not compared: light may have changed by itself.
 LONGEST_US = 2_000_000
 #: Log ratios are cut at so many robust deviations before light is summed.
@@ -129,23 +132,44 @@ def _measured(
     events: EventSource,
     contrast: Contrast,
 ) -> Step | None:
-    import cv2
-
     margin = contrast.ramp_us
     seen = events.between(one.start_us - margin, two.end_us + 2 * margin)
     shape = usable.shape
     fired = event_counts(seen.x, seen.y, seen.polarity, shape).sum(axis=0) > 0
-    # an edge that fires here creeps by less than a threshold next door
-    quiet = usable & (cv2.dilate(fired.astype(np.uint8), np.ones((3, 3), np.uint8)) == 0)
-    if quiet.sum() < LEAST_QUIET:
-        middle = one.time_us
-        explained = [log_blur_ratio(seen, f.start_us, f.end_us, middle, contrast, shape) for f in (one, two)]
-        ratio, quiet = ratio - (explained[1] - explained[0]), usable
-    return _agreed(ratio, quiet)
+    quiet = _quiet(usable, fired)
+    if quiet.sum() >= LEAST_QUIET:
+        slope = _slope(luma(one.image)) + _slope(luma(two.image))
+        parts = _parts(ratio, quiet & (slope <= np.quantile(slope[quiet], FLATTEST)))
+        if len(parts) >= LEAST_PARTS:
+            return _agreed(parts)
+    middle = one.time_us
+    explained = [log_blur_ratio(seen, f.start_us, f.end_us, middle, contrast, shape) for f in (one, two)]
+    return _agreed(_parts(ratio - (explained[1] - explained[0]), usable))
 
 
-def _agreed(ratio: NDArray[np.float64], chosen: NDArray[np.bool_]) -> Step | None:
-    """Robust mean over the parts of a picture, if they agree."""
+def _quiet(usable: NDArray[np.bool_], fired: NDArray[np.bool_]) -> NDArray[np.bool_]:
+    """Find usable pixels as far from any event as enough of them are."""
+    import cv2
+
+    quiet = usable
+    for margin in MARGINS:
+        quiet = usable & (cv2.dilate(fired.astype(np.uint8), np.ones((margin, margin), np.uint8)) == 0)
+        if quiet.sum() >= max(LEAST_QUIET, usable.sum() // 20):
+            break
+    return quiet
+
+
+def _slope(light: Image) -> Image:
+    """Slope of light around each pixel, relative to it."""
+    import cv2
+
+    smooth = cv2.GaussianBlur(light, (0, 0), 1.5)
+    across, down = cv2.Sobel(smooth, cv2.CV_32F, 1, 0), cv2.Sobel(smooth, cv2.CV_32F, 0, 1)
+    return np.asarray(np.hypot(across, down) / np.maximum(smooth, USABLE_LIGHT[0]), np.float32)
+
+
+def _parts(ratio: NDArray[np.float64], chosen: NDArray[np.bool_]) -> NDArray[np.float64]:
+    """Robust mean and number of pixels of each part of a picture that has enough of them, shape (parts, 2)."""
     height, width = ratio.shape
     parts = []
     for rows in np.array_split(np.arange(height), PARTS):
@@ -153,11 +177,16 @@ def _agreed(ratio: NDArray[np.float64], chosen: NDArray[np.bool_]) -> Step | Non
             part = slice(rows[0], rows[-1] + 1), slice(columns[0], columns[-1] + 1)
             values = ratio[part][chosen[part]]
             if len(values) >= PART_PIXELS:
-                parts.append(_centre(values))
+                parts.append((_centre(values), len(values)))
+    return np.array(parts).reshape(-1, 2)
+
+
+def _agreed(parts: NDArray[np.float64]) -> Step | None:
+    """Mean over the parts of a picture, if they agree."""
     if len(parts) < LEAST_PARTS:
         return None
-    whole = _centre(ratio[chosen])
-    away = np.abs(np.asarray(parts) - whole)
+    whole = float(np.average(parts[:, 0], weights=parts[:, 1]))
+    away = np.abs(parts[:, 0] - whole)
     if np.mean(away <= max(APART, APART_SHARE * abs(whole))) < AGREEING:
         return None
     return Step(whole, float(1.4826 * np.median(away) / np.sqrt(len(parts))), len(parts))
