@@ -53,16 +53,15 @@ class RowEvents:
 
     Parameters
     ----------
-    source : FrameEvents
-    row_time_us : float
-    height : int
-        Rows of the (cropped) frame.
+    source : EventSource
+        Events in the frames' clock and on the frames' pixels.
+    delays_us : ndarray of int64, shape (H,)
+        By how much each row of the (cropped) frame is late.
     """
 
-    def __init__(self, source: FrameEvents, row_time_us: float, height: int) -> None:
-        self._source = source
-        self.delays_us = row_delays_us(row_time_us, height)
-        self._earliest, self._latest = int(self.delays_us.min()), int(self.delays_us.max())
+    def __init__(self, source: EventSource, delays_us: NDArray[np.int64]) -> None:
+        self._source, self.delays_us = source, delays_us
+        self._earliest, self._latest = int(delays_us.min()), int(delays_us.max())
         self.size, self.count, self.notes = source.size, source.count, source.notes
         self.first_us, self.last_us = source.first_us - self._latest, source.last_us - self._earliest
         # recorded in every row
@@ -177,4 +176,4 @@ def frames_in_row_time(source: FrameSource, row_time_us: float | None) -> FrameS
 
 def events_in_row_time(source: FrameEvents, row_time_us: float | None, height: int) -> FrameEvents:
     """Give events in row time; the very same ones for a global shutter, or where the row time is not known."""
-    return RowEvents(source, row_time_us, height) if row_time_us else source
+    return RowEvents(source, row_delays_us(row_time_us, height)) if row_time_us else source
