@@ -91,7 +91,7 @@ class Keys:
         self.indices, self.events, self.rig = list(indices), events, rig
         # For what is compared with a frame's own exposure; between pictures of one instant the scene's own time holds.
         self._rowed = None if events is None else events_in_row_time(events, row_time, height)
-        self._delays_us, self._rolling = row_delays_us(row_time, height), row_time != 0
+        self.delays_us, self.rolling = row_delays_us(row_time, height), row_time != 0
         self.network, self.trust = network, trust
         self.times_us = [_time(self.frames, index) for index in indices]
         self._kept = Evidences(OrderedDict(), OrderedDict())
@@ -133,7 +133,7 @@ class Keys:
             return np.zeros(shape, np.float32)
         seen = self._rowed.between(int(self.frames.start_us[index]), int(self.frames.end_us[index]))
         count = event_counts(seen.x, seen.y, seen.polarity, shape).sum(axis=0).astype(np.float32)
-        return count + self._row_change(key)[1].astype(np.float32) if self._rolling else count
+        return count + self._row_change(key)[1].astype(np.float32) if self.rolling else count
 
     def picture(self, key: int) -> Picture:
         """Make the sharp picture of a key at its own time; one that events do not cover stays as captured.
@@ -178,7 +178,7 @@ class Keys:
         span = Span(left, right, interval, self._near(*interval, self.events), self.rig.contrast)
         captured = luma(self.frames.frame(self.indices[key]).image)
         own = self._own(key).value
-        if self._rolling:
+        if self.rolling:
             moved, _ = self._row_change(key)
             captured = np.exp(log_light(captured) + moved).astype(np.float32) - LOG_FLOOR
             own = own + moved
@@ -219,14 +219,14 @@ class Keys:
     def _integral(self, key: int) -> Picture:
         frame = self.frames.frame(self.indices[key])
         time_us = self.times_us[key]
-        sharp = frame.exposure_us == 0 and not self._rolling
+        sharp = frame.exposure_us == 0 and not self.rolling
         if sharp or not self.covered(key):
             return Picture(frame.image, time_us, Kind.CAPTURED, By.FRAMES)
         # ratio of the latent to the blurred light, the same for every colour
         change = self._log_latent(key).astype(np.float32) - log_light(luma(frame.image))
         ratio = np.exp(change if frame.image.ndim == 2 else change[..., None])
         image = (np.maximum(frame.image, 0) + LOG_FLOOR) * ratio - LOG_FLOOR
-        if self._rolling:
+        if self.rolling:
             image = self._at_one_instant(key, image)
         return Picture(image, time_us, Kind.DEBLURRED, By.INTEGRAL)
 
@@ -248,7 +248,7 @@ class Keys:
             moved = self._row_change(key)
             times = np.diff(self.times_us[max(0, key - 1) : key + 2])
             steps = (int(times[0]), int(times[-1])) if len(times) else (1, 1)
-            latent = latent_at_one_instant(own, change, at, moved, self._delays_us, steps, self.rig.contrast)
+            latent = latent_at_one_instant(own, change, at, moved, self.delays_us, steps, self.rig.contrast)
             return np.exp(latent).astype(np.float32) - LOG_FLOOR
 
         return remember(self._carried_rows, key, make, 5)
@@ -297,7 +297,7 @@ class Keys:
 
     def _row_change(self, key: int) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
         """Log change from each row's own instant to a rolling shutter's key, and its events, shape (H, W) each."""
-        time_us, delays = self.times_us[key], self._delays_us
+        time_us, delays = self.times_us[key], self.delays_us
         events = self._near(time_us + int(delays.min()), time_us + int(delays.max()), self.events)
         return row_change(events, delays, time_us, self.rig.contrast, (self.frames.shape[0], self.frames.shape[1]))
 
