@@ -72,11 +72,16 @@ def rig_lines(rig: Rig) -> Iterator[str]:
         yield f"caution: {rig.clock_check.evidence}"
     yield _line("positive threshold", rig.contrast_positive)
     yield _line("negative threshold", rig.contrast_negative)
+    if rig.registration.value is not None:
+        (a, b, c), (d, e, f), _ = rig.registration.value
+        shown = f"x = {a:.4f} x + {b:.4f} y + {c:.2f}, y = {d:.4f} x + {e:.4f} y + {f:.2f} (event to frame pixel)"
+        yield _line("registration", replace(rig.registration, value=shown), "+/- in event pixels")
     yield _line("hot pixels", replace(rig.hot_pixels, value=len(rig.hot_pixels.value or [])))
 
 
 def _line(name: str, quantity: Quantity, unit: str = "") -> str:
-    value = "cannot be told" if quantity.value is None else f"{quantity.value:g} {unit}".rstrip()
+    told = quantity.value if isinstance(quantity.value, str | None) else f"{quantity.value:g}"
+    value = "cannot be told" if told is None else f"{told} {unit}".rstrip()
     doubt = f" +/- {quantity.uncertainty:.2g}" if quantity.uncertainty is not None else ""
     evidence = f"; {quantity.evidence}" if quantity.evidence else ""
     return f"{name}: {value}{doubt} ({quantity.method}{evidence})"

@@ -7,6 +7,7 @@ from enhance.calibrate.levelled import LevelledFrames, as_tabled
 from enhance.calibrate.registered import calibrate
 from enhance.calibrate.rig import known_rig
 from enhance.calibrate.rig_file import read_rig, rig_text
+from enhance.calibrate.rig_picture import rig_picture
 from enhance.calibrate.steady import in_steady_light
 from enhance.calibrate.stripes import find_stripes
 
@@ -21,5 +22,6 @@ __all__ = [
     "in_steady_light",
     "known_rig",
     "read_rig",
+    "rig_picture",
     "rig_text",
 ]

@@ -12,7 +12,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from enhance.calibrate import calibrate as calibrate_recording
-from enhance.calibrate import rig_text
+from enhance.calibrate import rig_picture, rig_text
 from enhance.clip.held_out import Judged, judge
 from enhance.clip.keys import Keys
 from enhance.clip.outputs import Outputs
@@ -26,7 +26,7 @@ from enhance.recording import By, Kind, Recording
 from enhance.rig import Rig
 from enhance.settings import BELOW_LEAST, ClipSettings
 from enhance.shipped import shipped_folder
-from enhance.write import cautions, write_text
+from enhance.write import cautions, write_drawing, write_text
 
 if TYPE_CHECKING:
     from enhance.interpolate.network import FusionNetwork
@@ -110,7 +110,7 @@ def run(settings: ClipSettings, progress: Progress) -> ClipResult:
 
 
 def calibrate(settings: ClipSettings, progress: Progress) -> Rig:
-    """Measure the rig of one recording and write rig.toml into its output folder.
+    """Measure the rig of one recording; write rig.toml, and rig.png with the evidence, into its output folder.
 
     Parameters
     ----------
@@ -124,7 +124,10 @@ def calibrate(settings: ClipSettings, progress: Progress) -> Rig:
     progress(0, 1, "measuring the rig")
     with opened(settings) as recording:
         rig = measured_rig(recording, range(len(recording.frames)), settings)
+        picture = rig_picture(recording, range(len(recording.frames)), rig)
     write_text(settings.output.folder / "rig.toml", rig_text(rig))
+    if picture is not None:
+        write_drawing(settings.output.folder / "rig.png", picture)
     progress(1, 1, "measuring the rig")
     return rig
 

@@ -1,7 +1,7 @@
 """Video, stills, tables and records; each file appears whole or not at all."""
 
 from enhance.write import cautions
-from enhance.write.overlap import write_overlap
+from enhance.write.overlap import write_drawing, write_overlap
 from enhance.write.stills import write_still
 from enhance.write.strip import caption_line
 from enhance.write.tables import write_json, write_table, write_text
@@ -15,6 +15,7 @@ __all__ = [
     "cautions",
     "probe_folder",
     "whole_file",
+    "write_drawing",
     "write_json",
     "write_overlap",
     "write_still",

@@ -1,4 +1,4 @@
-"""Which part of the pictures the events tell of, where it is not all of them."""
+"""Pictures about the work: which part of the frames the events tell of, and the evidence for a rig."""
 
 from __future__ import annotations
 
@@ -27,3 +27,8 @@ def write_overlap(path: Path, seen: NDArray[np.bool_]) -> None:
         If it cannot be written.
     """
     write_levels(path, np.where(seen, 65_535, 0).astype(np.uint16), {"Meaning": MEANING})
+
+
+def write_drawing(path: Path, drawing: NDArray[np.uint8]) -> None:
+    """Write a drawing, (H, W, 3) of 8 bit, as a PNG; raises as `write_overlap`."""
+    write_levels(path, drawing.astype(np.uint16) * np.uint16(257), {})
