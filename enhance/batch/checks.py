@@ -100,13 +100,13 @@ def _shutter(document: Document) -> Iterator[Mistake]:
             f'shutter = "rolling", or leave row_time out',
         )
     rig = document.get("rig")
-    if isinstance(frames, Mapping) and frames.get("shutter") == "rolling" and isinstance(rig, Mapping):
-        if rig.get("registration", "shared") != "shared":
-            yield (
-                ("rig", "registration"),
-                "another view than the frames' own does not go with a rolling shutter yet: rows of the sensor are not "
-                'rows of the frames. Bring the events onto the pixels of the frames first and write "shared"',
-            )
+    elsewhere = isinstance(rig, Mapping) and rig.get("registration", "shared") != "shared"
+    if isinstance(frames, Mapping) and frames.get("shutter") == "rolling" and elsewhere:
+        yield (
+            ("rig", "registration"),
+            "another view than the frames' own does not go with a rolling shutter yet: rows of the sensor are not "
+            'rows of the frames. Bring the events onto the pixels of the frames first and write "shared"',
+        )
 
 
 def _cover(document: Document) -> Iterator[Mistake]:

@@ -15,6 +15,7 @@ from enhance.clock import middle_us
 from enhance.errors import EnhanceError, JobError
 from enhance.recording import Recording
 from enhance.rig import Rig
+from enhance.rows import frames_in_row_time
 from enhance.settings import ClipSettings
 
 #: Seconds for one pixel of one picture, fitted to the demo and to a sparse real recording on two cores: a key, an
@@ -75,10 +76,16 @@ def check(settings: ClipSettings) -> Findings:
 def _look(recording: Recording, settings: ClipSettings) -> Findings:
     frames = recording.frames
     rig = known_rig(recording, settings.rig)
-    times = [middle_us(start, end) for start, end in zip(frames.start_us, frames.end_us, strict=True)]
+    # a row time that is to be estimated moves all times alike
+    timed = frames_in_row_time(frames, rig.row_time_us.value)
+    times = [middle_us(start, end) for start, end in zip(timed.start_us, timed.end_us, strict=True)]
     plan = make_plan(settings, times)
     mistakes, warnings = _overlap(recording, rig)
     warnings += [*frames.notes, *light_remarks(frames), *recording.events.notes, *plan.remarks]
+    if rig.row_time_us.value is None:
+        warnings.append(
+            "the row time of the rolling shutter will be estimated from what moves in several bands of rows"
+        )
     if len(frames) == 1:
         warnings.append("one frame only: no clip is made")
     if settings.slow_motion is None and not settings.output.times_us and settings.output.stills == "none":

@@ -20,6 +20,7 @@ from enhance.measure import (
     noise_sigma,
     psnr,
     re_expose,
+    row_shares,
     sharpness,
     ssim,
 )
@@ -82,7 +83,8 @@ def judge(pictures: Pictures, index: int) -> Judged:
     left, right = (keys.frames.frame(keys.indices[k]).image for k in (key, key + 1))
     sharp = pictures.at(held.time_us)
     times = _instants(pictures, key, held, sharp.image)
-    made = re_expose(pictures.at(t).image for t in times)
+    shares = row_shares(times, held.start_us, held.end_us, keys.delays_us) if keys.rolling else None
+    made = re_expose((pictures.at(t).image for t in times), shares)
     moving = _moving(pictures, key)
     plain = alternatives(left, right, keys.times_us[key], keys.times_us[key + 1], held.time_us)
     reference = light.to_codes(held.image)
@@ -117,12 +119,15 @@ def _instants(pictures: Pictures, key: int, held: Frame, middle: Image) -> list[
 
     The motion is that between pictures made within the exposure: the keys lie too far apart for the frames' own flow.
     """
-    if not pictures.keys.span_covered(key) or held.exposure_us == 0:
+    delays = pictures.keys.delays_us
+    # of a rolling shutter the earliest row's start and the latest one's end
+    start, end = held.start_us + int(delays.min()), held.end_us + int(delays.max())
+    if not pictures.keys.span_covered(key) or start == end:
         return exposure_times(held.start_us, held.end_us, 0.0)
     first, last = pictures.keys.times_us[key : key + 2]
-    ends = [pictures.at(t).image for t in (max(held.start_us, first), min(held.end_us, last))]
+    ends = [pictures.at(t).image for t in (max(start, first), min(end, last))]
     motion = sum(_motion_px(end, middle) for end in ends)
-    return exposure_times(held.start_us, held.end_us, min(motion, MOST_EXPOSED / 2))
+    return exposure_times(start, end, min(motion, MOST_EXPOSED / 2))
 
 
 def _motion_px(one: Image, two: Image) -> float:

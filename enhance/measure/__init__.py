@@ -3,7 +3,7 @@
 from enhance.measure.alternatives import alternatives
 from enhance.measure.edge import edge_sfr, mtf50, rise_10_90
 from enhance.measure.fidelity import psnr, ssim
-from enhance.measure.heldout import Figure, exposure_times, re_expose, summarise
+from enhance.measure.heldout import Figure, exposure_times, re_expose, row_shares, summarise
 from enhance.measure.moving import moving_mask, support_filter
 from enhance.measure.noise import ceiling, noise_sigma
 from enhance.measure.rank import rank_correlation
@@ -21,6 +21,7 @@ __all__ = [
     "psnr",
     "rank_correlation",
     "re_expose",
+    "row_shares",
     "rise_10_90",
     "sharpness",
     "ssim",
