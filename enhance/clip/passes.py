@@ -184,7 +184,7 @@ def _run(recording: Recording, settings: ClipSettings, state: _Progress) -> Clip
     every = settings.hold_out if settings.hold_out and count > settings.hold_out else 0
     held = [i for i in range(count) if every and i % every and i < every * ((count - 1) // every)]
     state.total = len(plan.pictures) + len(held)
-    with Outputs(settings, recording.frames, plan) as outputs:
+    with Outputs(settings, keys.frames, plan) as outputs:
         outputs.text("rig.toml", rig_text(rig))
         outputs.overlap(keys.seen)
         with state.stage("pictures"):
@@ -289,3 +289,7 @@ def _notes(recording: Recording, rig: Rig, plan: Plan, counts: Counter[str]) -> 
     if len(recording.frames) == 1:
         notes.append("one frame only: no clip is made")
     return tuple(notes)
+    if rig.row_time_us.value:
+        row_time = rig.row_time_us
+        how = f" ({row_time.method}: {row_time.evidence})" if row_time.evidence else ""
+        notes.append(f"rolling shutter, {row_time.value:.3f} us from row to row{how}: pictures are of one instant")
