@@ -18,6 +18,7 @@ from enhance.clip.pictures import Pictures
 from enhance.clip.source import events_on_frames
 from enhance.deblur import deblur
 from enhance.interpolate.network import FusionNetwork, load_network
+from enhance.interpolate.trust import TrustModel, load_trust
 from enhance.kernels.double_integral import log_sum
 from enhance.kernels.optical_flow import frame_only_picture
 from enhance.light import Image
@@ -63,20 +64,26 @@ class Ways:
     whole picture, in the frames' own curve. ``off`` is without the network; without one at all, ``ours`` is as well.
     """
 
-    def __init__(self, simulated: Simulated, network: FusionNetwork | None, rig: RigSettings | None = None) -> None:
+    def __init__(
+        self,
+        simulated: Simulated,
+        network: FusionNetwork | None,
+        rig: RigSettings | None = None,
+        trust: TrustModel | None = None,
+    ) -> None:
         recording = simulated.recording
         self.simulated, self.frames = simulated, recording.frames
         self.rig = calibrate(recording, range(len(self.frames)), rig or RigSettings())
-        self.fused, self.blended = self._pictures(network), self._pictures(None)
+        self.fused, self.blended = self._pictures(network, trust), self._pictures(None, None)
         self.times_us = self.fused.keys.times_us
 
     @cached_property
     def baseline(self) -> Baseline:
         return Baseline(self.simulated)
 
-    def _pictures(self, network: FusionNetwork | None) -> Pictures:
+    def _pictures(self, network: FusionNetwork | None, trust: TrustModel | None) -> Pictures:
         events = events_on_frames(self.simulated.recording, self.rig)
-        return Pictures(Keys(self.frames, range(len(self.frames)), events, self.rig, network))
+        return Pictures(Keys(self.frames, range(len(self.frames)), events, self.rig, network, trust))
 
     def key(self, k: int) -> dict[str, float]:
         """Figures of a key."""
@@ -120,6 +127,11 @@ class Ways:
 @pytest.fixture(scope="session")
 def network() -> FusionNetwork:
     return load_network(shipped_folder("models") / WEIGHTS)
+
+
+@pytest.fixture(scope="session")
+def trust() -> TrustModel:
+    return load_trust(shipped_folder("models") / "trust.json")
 
 
 @pytest.fixture(scope="session")

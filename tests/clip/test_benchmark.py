@@ -25,6 +25,8 @@ class Measured:
     """Means of one recording's figures, and what was expected of its inserted pictures beside what came true."""
 
     def __init__(self, ways) -> None:
+        # the simulated clocks are one: this is by how much the estimate is wrong
+        self.clock_error_us = ways.rig.offset_us.value
         keys = [ways.key(k) for k in SPANS]
         found, self.expected, self.true = [], [], []
         for k in SPANS:
@@ -39,13 +41,13 @@ class Measured:
 
 
 @pytest.fixture(scope="module")
-def measured(ways, network) -> Callable[[Benchmark], Measured]:
+def measured(ways, network, trust) -> Callable[[Benchmark], Measured]:
     """Return what measures a recording, once."""
     kept: dict[str, Measured] = {}
 
     def look(entry: Benchmark) -> Measured:
         if entry.name not in kept:
-            kept[entry.name] = Measured(ways(entry.record(), network))
+            kept[entry.name] = Measured(ways(entry.record(), network, trust=trust))
         return kept[entry.name]
 
     return look
@@ -60,7 +62,8 @@ def test_a_recording_gains_by_its_events(entry: Benchmark, measured, capsys: pyt
     found = measured(entry)
     with capsys.disabled():
         print(f"\n{entry.name:12} keys: " + ", ".join(f"{n} {v:.2f}" for n, v in found.key.items()), end="; ")
-        print("inserted: " + ", ".join(f"{n} {v:.2f}" for n, v in found.inserted.items()), end=" ")
+        print("inserted: " + ", ".join(f"{n} {v:.2f}" for n, v in found.inserted.items()), end="; ")
+        print(f"clock off by {found.clock_error_us} us", end=" ")
     assert found.key["ours"] >= found.key["captured"]
     assert found.inserted["ours"] >= found.inserted["flow"]
 
