@@ -1,5 +1,7 @@
 """Events moved into the frames' world: clock, crop, bad pixels."""
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
 
@@ -126,3 +128,74 @@ def test_noise_of_the_frames_is_floor_and_shot_in_quadrature():
 def test_contrast_carries_the_ramp():
     contrast = Rig(Quantity(0), Quantity(0.0), Quantity(0.2), Quantity(0.3), Quantity(1500)).contrast
     assert (contrast.positive, contrast.negative, contrast.ramp_us) == (0.2, 0.3, 1500)
+
+
+def apart(matrix, hot=(), offset=0):
+    return replace(rig(offset, hot=hot), registration=Quantity(matrix), sensor_size=(WIDTH, HEIGHT))
+
+
+def test_an_event_stands_at_every_frame_pixel_it_covers_once():
+    # 2 e + 0.5: two frame pixels an event pixel either way
+    events = RiggedEvents(everywhere(), apart([[2, 0, 0.5], [0, 2, 0.5], [0, 0, 1]]), (2 * WIDTH, 2 * HEIGHT))
+    seen = all_of(events)
+    assert len(seen) == 4 * WIDTH * HEIGHT
+    assert (np.diff(seen.t_us) >= 0).all()
+    source = everywhere().events
+    np.testing.assert_array_equal(seen.t_us, np.repeat(source.t_us, 4))
+    np.testing.assert_array_equal(seen.polarity, np.repeat(source.polarity, 4))
+    np.testing.assert_array_equal(seen.x // 2, np.repeat(source.x, 4))
+    np.testing.assert_array_equal(seen.y // 2, np.repeat(source.y, 4))
+    assert len(set(zip(seen.x.tolist(), seen.y.tolist(), strict=True))) == 4 * WIDTH * HEIGHT
+    assert events.seen is None
+    assert events.pitch == pytest.approx(2)
+
+
+def test_a_mirror_image_is_turned_back():
+    events = RiggedEvents(everywhere(), apart([[-1, 0, WIDTH - 1], [0, 1, 0], [0, 0, 1]]), (WIDTH, HEIGHT))
+    source = everywhere().events
+    np.testing.assert_array_equal(all_of(events).x, WIDTH - 1 - source.x)
+    np.testing.assert_array_equal(all_of(events).y, source.y)
+
+
+def test_a_crop_sees_its_part_of_what_the_whole_frame_sees():
+    turned = apart([[1.6, -0.3, 4], [0.3, 1.6, -2], [0, 0, 1]])
+    whole = all_of(RiggedEvents(everywhere(), turned, (24, 18)))
+    part = all_of(RiggedEvents(everywhere(), turned, (10, 9), (6, 5), (24, 18)))
+    inside = (whole.x >= 6) & (whole.x < 16) & (whole.y >= 5) & (whole.y < 14)
+    kept = whole.keep(inside)
+    assert len(kept) > 50
+    np.testing.assert_array_equal(part.t_us, kept.t_us)
+    assert set(zip(part.t_us.tolist(), part.x + 6, part.y + 5, strict=True)) == set(
+        zip(kept.t_us.tolist(), kept.x, kept.y, strict=True)
+    )
+
+
+def test_outside_the_overlap_nothing_is_seen_and_a_mask_says_so():
+    events = RiggedEvents(everywhere(), apart([[1, 0, 5], [0, 1, 0], [0, 0, 1]]), (WIDTH, HEIGHT))
+    assert not events.seen[:, :5].any()
+    assert events.seen[:, 5:].all()
+    seen = all_of(events)
+    assert seen.x.min() == 5
+    assert len(seen) == (WIDTH - 5) * HEIGHT
+    coarse = RiggedEvents(everywhere(), apart([[2, 0, 6.5], [0, 2, 0.5], [0, 0, 1]]), (2 * WIDTH, 2 * HEIGHT))
+    assert not coarse.seen[:, :6].any()
+    assert coarse.seen[:, 6:].all()
+
+
+def test_neighbouring_windows_share_out_spread_events():
+    events = RiggedEvents(everywhere(), apart([[3, 0, 1], [0, 3, 1], [0, 0, 1]], offset=7), (3 * WIDTH, 3 * HEIGHT))
+    parts = [events.between(t, t + 90) for t in range(0, 1300, 90)]
+    assert sum(len(part) for part in parts) == 9 * WIDTH * HEIGHT
+
+
+def test_a_hot_pixels_stand_in_is_spread_as_well():
+    doubled = [[2, 0, 0.5], [0, 2, 0.5], [0, 0, 1]]
+    seen = all_of(RiggedEvents(everywhere(), apart(doubled, hot=[(3, 2)]), (2 * WIDTH, 2 * HEIGHT)))
+    assert len(seen) == 4 * WIDTH * HEIGHT
+
+
+def test_thresholds_are_not_rescaled_and_know_how_wide_an_event_pixel_is():
+    known = apart([[4, 0, 1.5], [0, 4, 1.5], [0, 0, 1]])
+    assert known.contrast.thresholds == (0.2, 0.3)
+    assert known.contrast.pitch == pytest.approx(4)
+    assert rig().contrast.pitch == apart(np.eye(3).tolist()).contrast.pitch == 1.0
