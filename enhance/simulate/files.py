@@ -190,6 +190,7 @@ def _job(simulated: Simulated, frames: FrameArray, events: EventArray) -> str:
             f'light_curve = "{light.curve}"',
             f"black = {light.black:g}",
             f"white = {light.white:g}",
+            *_shutter(simulated.camera.row_time_us),
             *([] if simulated.camera.mosaic == "none" else [f'mosaic = "{simulated.camera.mosaic}"']),
             "",
             "[events]",
@@ -208,6 +209,10 @@ def _job(simulated: Simulated, frames: FrameArray, events: EventArray) -> str:
             "",
         ]
     )
+
+
+def _shutter(row_time_us: float) -> list[str]:
+    return ['shutter = "rolling"', f'row_time = "{row_time_us!r} us"'] if row_time_us else []
 
 
 def _write(path: Path, content: bytes) -> None:

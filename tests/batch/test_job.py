@@ -235,19 +235,6 @@ def test_a_wrong_value_says_where_what_and_what_to_write(write_job, changes: dic
     assert re.search(message, told[0]), told[0]
 
 
-NOT_BUILT = [
-    ({"frames.shutter": '"rolling"'}, "a rolling shutter is not built yet in this version; .*global shutter"),
-    ({"frames.row_time": '"14.8 us"'}, "row_time, for a rolling shutter, is not built yet"),
-    ({"rig.clock": '{ triggers = "triggers.csv" }'}, "a clock from trigger times is not built yet .* give the offset"),
-]
-
-
-@pytest.mark.parametrize(("changes", "message"), NOT_BUILT, ids=[" ".join(changes) for changes, _ in NOT_BUILT])
-def test_what_is_not_built_yet_is_refused_by_name_with_what_to_do(write_job, changes: dict, message: str) -> None:
-    (told,) = mistakes_of(write_job(changes))
-    assert re.search(message, told), told
-
-
 def test_a_broken_toml_file_is_refused_with_its_line(write_job) -> None:
     with pytest.raises(JobError, match=r"job\.toml: is not valid TOML: .*line 2"):
         read_job(write_job(text="title = 'x'\nframes = \n"))

@@ -5,7 +5,7 @@ import pytest
 
 from enhance.errors import MeasureError
 from enhance.light import Light
-from enhance.measure import Figure, alternatives, exposure_times, psnr, re_expose, summarise
+from enhance.measure import Figure, alternatives, exposure_times, psnr, re_expose, row_shares, summarise
 
 
 class TestSummary:
@@ -72,3 +72,28 @@ class TestAlternatives:
         made = alternatives(key0, key1, 0, 1_000, 500)
         error = {name: np.abs(image - truth)[8:-8, 8:-8].mean() for name, image in made.items()}
         assert error["flow"] < 0.5 * error["blend"] < error["nearest"]
+
+
+def test_each_row_is_re_exposed_over_its_own_part_of_the_pictures():
+    # three rows of 40 us, 20 us apart, seen by pictures every 10 us: each counts where it lies inside
+    times = [5, 15, 25, 35, 45, 55, 65, 75]
+    shares = row_shares(times, 20, 60, np.array([-20, 0, 20]))
+    expected = np.zeros((8, 3))
+    for row in range(3):
+        expected[2 * row : 2 * row + 4, row] = 0.25
+    np.testing.assert_allclose(shares, expected, atol=1e-6)
+
+
+def test_a_row_shorter_than_a_step_lies_between_the_two_nearest_pictures():
+    # sharp rows at 17.5 and 20: a quarter of the way from 15 to 25, and half of it
+    shares = row_shares([5, 15, 25, 35], 20, 20, np.array([-20, -2, 0, 20]))
+    np.testing.assert_allclose(shares[:, 1], [0, 0.7, 0.3, 0], atol=1e-6)
+    np.testing.assert_allclose(shares[:, 2], [0, 0.5, 0.5, 0], atol=1e-6)
+
+
+def test_shares_weigh_rows_of_grey_and_colour():
+    ones = [np.full((2, 3), level, np.float32) for level in (1.0, 3.0)]
+    shares = np.array([[1.0, 0.5], [0.0, 0.5]])
+    np.testing.assert_allclose(re_expose(ones, shares), [[1, 1, 1], [2, 2, 2]])
+    colour = [np.stack([image] * 3, axis=2) for image in ones]
+    np.testing.assert_allclose(re_expose(colour, shares)[:, 0, 1], [1, 2])
