@@ -18,6 +18,8 @@ from enhance.view import Lens, View, shared_view
 
 #: Under a flickering lamp pixels tell more often than thresholds are crossed: without it, halves of one are told.
 STEADY_PARTS = 2
+#: A stretch that lost this share of its events counts as not recorded: what is left tells of some of it only.
+MOST_LOST = 0.1
 
 
 @dataclass(frozen=True)
@@ -78,7 +80,7 @@ class Rig:
     flicker_in_frames : Quantity
         1 where the frames grow brighter and darker with it, 0 where they do not.
     lost : Quantity
-        Value: list of [start, end], event clock, in which events are missing. Of this recording alone, in no rig file.
+        Value: list of [start, end, share of the events lost], event clock. Of this recording alone, in no rig file.
     clock_check : Quantity
         What a given clock lacks, microseconds, with a remark where that is to be told. Of this recording alone.
     """
@@ -209,7 +211,9 @@ class RiggedEvents:
                 np.array([source.first_us, source.last_us, source.cover_start_us, source.cover_end_us], dtype=np.int64)
             )
         )
-        self.lost: NDArray[np.int64] = self.clock.to_frame(np.array(rig.lost.value or (), np.int64).reshape(-1, 2))
+        lost = np.array(rig.lost.value or (), np.float64).reshape(-1, 3)
+        self._lost_us = self.clock.to_frame(lost[:, :2].astype(np.int64))
+        self._lost_share = lost[:, 2]
 
     def between(self, start_us: int, end_us: int) -> Events:
         """Events of ``[start_us, end_us)`` of the frame clock."""
@@ -238,8 +242,13 @@ class RiggedEvents:
 
     def covers(self, start_us: int, end_us: int) -> bool:
         """Whether the sensor was recording all through ``[start_us, end_us)``, and no events of it are lost."""
-        lost = ((self.lost[:, 0] < end_us) & (start_us < self.lost[:, 1])).any()
+        lost = ((self._lost_us[:, 0] < end_us) & (start_us < self._lost_us[:, 1]))[self._lost_share >= MOST_LOST].any()
         return self.cover_start_us <= start_us and end_us <= self.cover_end_us and not lost
+
+    def lost_share(self, start_us: int, end_us: int) -> float:
+        """Largest share of the events that is lost anywhere in ``[start_us, end_us)``; 0 where none are."""
+        met = (self._lost_us[:, 0] < end_us) & (start_us < self._lost_us[:, 1])
+        return float(self._lost_share[met].max(initial=0.0))
 
     def close(self) -> None:
         """Release the file."""

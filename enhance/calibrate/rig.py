@@ -27,6 +27,7 @@ from enhance.calibrate.flicker import find_flicker
 from enhance.calibrate.frame_noise import estimate_frame_noise
 from enhance.calibrate.hot_pixels import find_hot_pixels
 from enhance.calibrate.known_view import known_view
+from enhance.calibrate.lost import find_lost
 from enhance.calibrate.ramp import estimate_ramp
 from enhance.calibrate.rig_file import as_written, read_rig
 from enhance.calibrate.rolling import in_known_row_time, known_row_time
@@ -69,6 +70,8 @@ def calibrate(recording: Recording, keys: Sequence[int], settings: RigSettings) 
     rig = known_rig(recording, settings)
     if rig.flicker_hz.value is None:
         rig = replace(rig, flicker_hz=find_flicker(recording.events))
+    # of this very recording, whatever a rig file says
+    rig = replace(rig, lost=find_lost(recording.events))
     recording = replace(recording, events=in_steady_light(recording.events, rig))
     if rig.hot_pixels.value is None:
         rig = replace(rig, hot_pixels=find_hot_pixels(recording.events))
