@@ -19,6 +19,7 @@ from enhance.clip.outputs import Outputs
 from enhance.clip.pictures import Pictures
 from enhance.clip.plan import Plan, make_plan
 from enhance.clip.quality import below_count, expected_notes, expected_summary, held_out_summary, sharpness_summary
+from enhance.clip.remarks import lost_figures, rig_remarks
 from enhance.clip.source import events_on_frames, light_remarks, opened
 from enhance.errors import CalibrationError
 from enhance.measure import sharpness
@@ -195,6 +196,7 @@ def _run(recording: Recording, settings: ClipSettings, state: _Progress) -> Clip
         "title": settings.title,
         "pictures": dict(counts),
         "deblurring": sharp,
+        "lost_events": lost_figures(rig),
         "expected_psnr": expected_summary(outputs.expected, settings.least_psnr),
         "cautions": cautions.LONG,
     }
@@ -276,6 +278,7 @@ def _judge_all(
 
 def _notes(recording: Recording, rig: Rig, plan: Plan, counts: Counter[str]) -> tuple[str, ...]:
     notes = [*recording.frames.notes, *light_remarks(recording.frames), *recording.events.notes, *plan.remarks]
+    notes += rig_remarks(rig)
     if rig.offset_us.value is None:
         notes.append(f"the clock of the events cannot be told ({rig.offset_us.evidence}): every picture is from frames")
     elif counts[Kind.CAPTURED]:
