@@ -1,4 +1,4 @@
-"""Hot pixels: those that fire all the time whatever the scene does."""
+"""Bad pixels: hot ones fire all the time whatever the scene does, dead ones never do."""
 
 from __future__ import annotations
 
@@ -23,6 +23,8 @@ COMPARED = 2
 #: Where the scene is busy a hot pixel does not stand out of the whole, but of the slices in which those neighbours are
 #: quiet (this many events at the most): there must be as many such slices, and this share of all.
 QUIET_EVENTS, LEAST_QUIET, QUIET_SHARE = 1, 4, 0.25
+#: A dead pixel tells nothing while each of its neighbours, but for one that may be dead as well, tells this much.
+DEAD_NEIGHBOURS, QUIETEST = 30, 1
 
 
 def find_hot_pixels(events: EventSource) -> Quantity:
@@ -39,10 +41,7 @@ def find_hot_pixels(events: EventSource) -> Quantity:
         Value: list of [x, y].
     """
     width, height = events.size
-    span = events.last_us + 1 - events.first_us
-    slices = int(np.clip(span // SHORT_SLICE_US, LEAST_SLICES, SLICES))
-    length = min(SLICE_US, max(1, span // slices))
-    starts = [events.first_us + (span - length) * k // (slices - 1) for k in range(slices)]
+    starts, length = _slices(events)
     whole, quiet = _Tally((height, width)), _Tally((height, width))
     looked, read = 0, 0
     for start in starts:
@@ -61,6 +60,43 @@ def find_hot_pixels(events: EventSource) -> Quantity:
     found = [[int(x), int(y)] for x, y in zip(columns, rows, strict=True)]
     evidence = f"{looked} slices of {length / 1000:.1f} ms; {len(found)} of {width * height} pixels"
     return Quantity(found, None, "rate against the neighbours, slice by slice", evidence)
+
+
+def find_dead_pixels(events: EventSource) -> Quantity:
+    """Find pixels that never tell anything where all around them do.
+
+    Parameters
+    ----------
+    events : EventSource
+        In the sensor's own world; a lamp's flicker, if there is one, still in it.
+
+    Returns
+    -------
+    Quantity
+        Value: list of [x, y].
+    """
+    width, height = events.size
+    starts, length = _slices(events)
+    total, read = np.zeros((height, width), np.int64), 0
+    for start in starts:
+        seen = events.between(start, start + length)
+        total += event_counts(seen.x, seen.y, seen.polarity, (height, width)).sum(axis=0)
+        read += len(seen)
+        if read > MOST_EVENTS:
+            break
+    rows, columns = np.nonzero((total == 0) & (_nth_neighbour(total, QUIETEST) >= DEAD_NEIGHBOURS))
+    found = [[int(x), int(y)] for x, y in zip(columns, rows, strict=True)]
+    judged = int((_nth_neighbour(total, QUIETEST) >= DEAD_NEIGHBOURS).sum())
+    evidence = f"{len(found)} of the {judged} pixels whose neighbours are busy enough to tell"
+    return Quantity(found, None, "silence among busy neighbours", evidence)
+
+
+def _slices(events: EventSource) -> tuple[list[int], int]:
+    """Starts and length of the slices that are looked at."""
+    span = events.last_us + 1 - events.first_us
+    slices = int(np.clip(span // SHORT_SLICE_US, LEAST_SLICES, SLICES))
+    length = min(SLICE_US, max(1, span // slices))
+    return [events.first_us + (span - length) * k // (slices - 1) for k in range(slices)], length
 
 
 class _Tally:
@@ -86,9 +122,14 @@ class _Tally:
 
 def _busy_neighbour(total: NDArray[np.int64]) -> NDArray[np.int64]:
     """Count of the second busiest of each pixel's neighbours, shape (H, W)."""
+    return _nth_neighbour(total, -COMPARED)
+
+
+def _nth_neighbour(total: NDArray[np.int64], nth: int) -> NDArray[np.int64]:
+    """Count of the n-th of each pixel's 8 neighbours, from the least busy up, shape (H, W)."""
     height, width = total.shape
     # Mirrored: a line that moves goes on beyond the frame's border.
     around = np.pad(total, 1, mode="reflect")
     shifted = [around[1 + dy : 1 + dy + height, 1 + dx : 1 + dx + width] for dy in (-1, 0, 1) for dx in (-1, 0, 1)]
     del shifted[4]  # the pixel itself
-    return np.asarray(np.partition(np.stack(shifted), -COMPARED, axis=0)[-COMPARED])
+    return np.asarray(np.partition(np.stack(shifted), nth, axis=0)[nth])

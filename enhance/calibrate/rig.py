@@ -25,7 +25,7 @@ from enhance.calibrate.even_light import lamp_told
 from enhance.calibrate.evidence import Pair, gather_pairs
 from enhance.calibrate.flicker import find_flicker
 from enhance.calibrate.frame_noise import estimate_frame_noise
-from enhance.calibrate.hot_pixels import find_hot_pixels
+from enhance.calibrate.hot_pixels import find_dead_pixels, find_hot_pixels
 from enhance.calibrate.known_view import known_view
 from enhance.calibrate.lost import find_lost
 from enhance.calibrate.ramp import estimate_ramp
@@ -72,6 +72,8 @@ def calibrate(recording: Recording, keys: Sequence[int], settings: RigSettings) 
         rig = replace(rig, flicker_hz=find_flicker(recording.events))
     # of this very recording, whatever a rig file says
     rig = replace(rig, lost=find_lost(recording.events))
+    if rig.dead_pixels.value is None:
+        rig = replace(rig, dead_pixels=find_dead_pixels(recording.events))
     recording = replace(recording, events=in_steady_light(recording.events, rig))
     if rig.hot_pixels.value is None:
         rig = replace(rig, hot_pixels=find_hot_pixels(recording.events))
@@ -113,7 +115,7 @@ def known_rig(recording: Recording, settings: RigSettings) -> Rig:
         If the rig file cannot be read or does not fit.
     """
     size = recording.events.size
-    rig = Rig(UNKNOWN, UNKNOWN, UNKNOWN, UNKNOWN, UNKNOWN, UNKNOWN, UNKNOWN, size)
+    rig = Rig(UNKNOWN, UNKNOWN, UNKNOWN, UNKNOWN, UNKNOWN, UNKNOWN, UNKNOWN, size, dead_pixels=UNKNOWN)
     if settings.file is not None:
         rig = read_rig(settings.file, size)
     if settings.contrast is not None:
