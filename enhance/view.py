@@ -140,7 +140,8 @@ def project(matrix: Array, points: Array) -> Array:
     """Apply a 3x3 matrix to points, shape (N, 2); NaN for those it sends to or beyond infinity."""
     solid = points @ matrix[:, :2].T + matrix[:, 2]
     # The sign of the third row's value tells the side: the one most of the picture lies on is in front.
-    depth = solid[:, 2:] * (1.0 if np.median(solid[:, 2]) > 0 else -1.0)
+    front = len(solid) == 0 or np.median(solid[:, 2]) > 0
+    depth = solid[:, 2:] * (1.0 if front else -1.0)
     good = depth > 1e-9
     flat = solid[:, :2] / np.where(good, solid[:, 2:], 1.0)
     return np.where(good, flat, np.nan)

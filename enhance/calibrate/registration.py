@@ -29,6 +29,8 @@ Map = NDArray[np.float32]
 SEARCHED, FITTED = 5, 12
 #: Blur of the maps, event pixels, from the coarse search's to the last.
 BLURS_PX = (3.0, 1.5, 0.8)
+#: Log light that must change somewhere in the frames: less is arithmetic.
+LEAST_CHANGE = 0.01
 #: A correlation below this is no evidence; another answer within this part of the best makes it none.
 LEAST_CORRELATION, RIVAL = 0.3, 0.85
 #: What perspective must leave of the unexplained part, 1 - correlation^2, to be believed.
@@ -150,7 +152,7 @@ def register(maps: ChangeMaps) -> Found:
     CalibrationError
         If the recording cannot tell, with the reason.
     """
-    if not any(each.any() for each in maps.frames):
+    if not any(float(np.abs(each).max()) > LEAST_CHANGE for each in maps.frames):
         raise CalibrationError("no usable pixel of the frames changes")
     if not any(each.any() for each in maps.events):
         raise CalibrationError("no events near the keys")
