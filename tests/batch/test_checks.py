@@ -17,6 +17,7 @@ from enhance.errors import JobError
         ({"events.source": '"frames"'}, r"events.source: .*frames is a folder; expected a file"),
         ({"events.source": f'"{"e" * 300}.h5"'}, r"e\.h5 does not exist"),
         ({"rig.file": '"rig.toml"'}, r"rig.file: .*rig.toml does not exist"),
+        ({"rig.clock": '{ triggers = "t.csv" }'}, r"rig.clock.triggers: .*t.csv does not exist"),
     ],
 )
 def test_an_input_that_is_not_there_is_named(write_job, changes: dict[str, str], message: str) -> None:
@@ -76,3 +77,31 @@ def test_mistakes_of_keys_and_of_files_are_told_together(write_job) -> None:
 def test_trust_maps_can_stand_beside_any_still(write_job, changes: dict[str, str]) -> None:
     output = read_job(write_job({"output.trust": "true", "output.stills": '"none"', **changes})).output
     assert output.trust
+
+
+def test_a_trigger_table_reaches_the_settings(write_job, tmp_path: Path) -> None:
+    (tmp_path / "triggers.csv").touch()
+    rig = read_job(write_job({"rig.clock": '{ triggers = "triggers.csv" }'})).rig
+    assert (rig.triggers, rig.offset_us, rig.drift_ppm) == (tmp_path / "triggers.csv", None, None)
+
+
+@pytest.mark.parametrize(
+    ("changes", "message"),
+    [
+        (
+            {"rig.clock": '{ triggers = "frames.csv", offset = "0 us" }'},
+            "rig.clock: offset beside triggers: the trigger",
+        ),
+        (
+            {"rig.clock": '{ triggers = "frames.csv", offset = "0 us", drift_ppm = 1.0 }'},
+            "rig.clock: drift_ppm and offset beside triggers: .* tells the whole clock; keep one",
+        ),
+        (
+            {"rig.clock": '"shared"', "rig.triggers": '"frames.csv"'},
+            'rig.triggers: a trigger table stands inside rig.clock, .* found clock = "shared" beside it',
+        ),
+    ],
+)
+def test_a_trigger_table_goes_with_no_other_clock(write_job, changes: dict[str, str], message: str) -> None:
+    with pytest.raises(JobError, match=message):
+        read_job(write_job(changes))

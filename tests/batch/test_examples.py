@@ -39,12 +39,26 @@ def test_every_shipped_job_is_right(job: Path, tmp_path: Path) -> None:
 
 def test_each_shows_its_situation(tmp_path: Path) -> None:
     found = {job.stem: read_job(beside_its_inputs(job, tmp_path / job.stem)) for job in JOBS}
-    assert set(found) == {"demo", "video-source", "windows", "rig-reuse", "stills-only", "trust"}
+    assert set(found) == {
+        "demo",
+        "video-source",
+        "windows",
+        "rig-reuse",
+        "rolling-shutter",
+        "stills-only",
+        "triggers",
+        "trust",
+        "two-sensors",
+    }
     assert found["video-source"].frames.times is None
     assert [window.factor for window in found["windows"].slow_motion.windows] == [None, 32]
     assert found["rig-reuse"].rig.file is not None
+    assert found["rolling-shutter"].rig.row_time_us == 14.8
     assert found["stills-only"].slow_motion is None
+    assert found["triggers"].rig.triggers is not None
     assert found["trust"].output.trust
+    assert found["two-sensors"].rig.registration == "estimate"
+    assert found["two-sensors"].rig.event_lens is not None
     assert found["trust"].least_psnr == 32
 
 
