@@ -56,6 +56,8 @@ class EventSensor:
         The scene's light is multiplied by ``1 + depth sin(2 pi f t)``; depth 0: steady light.
     latency_us, latency_jitter_us : float
         Added to each event's time: a constant, and a normal deviate that never makes the whole negative.
+    dark_latency_us, dark_light : float
+        Added too: ``dark_latency * dark_light / (dark_light + light)``, a photoreceptor that is slower in the dark.
 
     Raises
     ------
@@ -75,6 +77,8 @@ class EventSensor:
     lamp_depth: float = 0.0
     latency_us: float = 0.0
     latency_jitter_us: float = 0.0
+    dark_latency_us: float = 0.0
+    dark_light: float = 0.1
 
     def __post_init__(self) -> None:
         if min(self.contrast_positive, self.contrast_negative) < 0.02:
@@ -86,7 +90,7 @@ class EventSensor:
                 f"lamp_depth is {self.lamp_depth} and hot_fraction {self.hot_fraction}; expected shares of 0 to 1"
             )
         rates = (self.mismatch, self.refractory_us, self.noise_hz, self.leak_hz, self.hot_rate_hz, self.lamp_hz)
-        if min(*rates, self.latency_us, self.latency_jitter_us) < 0:
+        if min(*rates, self.latency_us, self.latency_jitter_us, self.dark_latency_us) < 0:
             raise ValueError("mismatch, rates and times of an event sensor must not be negative")
 
     def lamp(self, t_s: float) -> float:
@@ -195,8 +199,10 @@ class SensorRun:
     def _sorted(self, kept: list[tuple]) -> Events:
         t, pixel, polarity = (np.concatenate(column) for column in zip(*kept, strict=True))
         sensor = self.sensor
-        if sensor.latency_us or sensor.latency_jitter_us:
+        if sensor.latency_us or sensor.latency_jitter_us or sensor.dark_latency_us:
             late = sensor.latency_us + sensor.latency_jitter_us * self._rng.standard_normal(len(t))
+            if sensor.dark_latency_us and self._level is not None:
+                late += sensor.dark_latency_us * sensor.dark_light / (sensor.dark_light + np.exp(self._level[pixel]))
             t = t + np.maximum(np.floor(late), 0).astype(np.int64)
         order = np.argsort(t, kind="stable")
         pixel = pixel[order]

@@ -166,3 +166,20 @@ def test_colour_is_seen_through_its_luma():
 def test_settings_that_cannot_be_are_refused(wrong, message):
     with pytest.raises(ValueError, match=message):
         EventSensor(**wrong)
+
+
+def test_a_sensor_that_is_slower_in_the_dark_is_late_by_what_its_light_says():
+    # lag = dark_latency * dark_light / (dark_light + light); the same crossings, told later
+    before, after = np.full((1, 2), 0.1, np.float32), np.array([[0.2, 0.4]], np.float32)
+    prompt, late = (
+        SensorRun(EventSensor(0.2, 0.2, dark_latency_us=lag, dark_light=0.1), (2, 1), np.random.default_rng(1))
+        for lag in (0.0, 3_000.0)
+    )
+    times = []
+    for run in (prompt, late):
+        run.advance(before, 0.0)
+        events = run.advance(after, 10_000.0)
+        times.append({x: np.sort(events.t_us[events.x == x]) for x in (0, 1)})
+    for x, light in ((0, 0.2), (1, 0.4)):
+        assert len(times[0][x]) > 1
+        assert times[1][x] - times[0][x] == pytest.approx(300 / (0.1 + light), abs=1)
