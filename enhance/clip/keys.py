@@ -19,9 +19,11 @@ from enhance.clock import middle_us
 from enhance.deblur import (
     WINDOW,
     Evidence,
+    at_least,
     change_evidence,
     couple,
     latent_at_one_instant,
+    log_noise,
     own_evidence,
     row_change,
 )
@@ -223,7 +225,8 @@ class Keys:
         if sharp or not self.covered(key):
             return Picture(frame.image, time_us, Kind.CAPTURED, By.FRAMES)
         # ratio of the latent to the blurred light, the same for every colour
-        change = self._log_latent(key).astype(np.float32) - log_light(luma(frame.image))
+        latent = at_least(self._log_latent(key), self._own(key).value, frame.clipped)
+        change = latent.astype(np.float32) - log_light(luma(frame.image))
         ratio = np.exp(change if frame.image.ndim == 2 else change[..., None])
         image = (np.maximum(frame.image, 0) + LOG_FLOOR) * ratio - LOG_FLOOR
         if self.rolling:
@@ -273,7 +276,8 @@ class Keys:
         def make() -> Evidence:
             frame = self.frames.frame(self.indices[key])
             light = luma(frame.image)
-            noise = self.rig.noise(light) / (np.maximum(light, 0) + LOG_FLOOR)
+            captured = self.rig.noise(light * np.float32(frame.scale)) / np.float32(frame.scale)
+            noise = log_noise(captured, light, frame.clipped).astype(np.float64)
             interval = (frame.start_us, frame.end_us)
             if not self.covered(key):
                 return _captured(frame, noise)

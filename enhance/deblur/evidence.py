@@ -19,6 +19,7 @@ from numpy.typing import NDArray
 
 from enhance.kernels.double_integral import log_blur_ratio, log_sum
 from enhance.kernels.event_integral import event_counts
+from enhance.light import LOG_FLOOR, Image
 from enhance.recording import Contrast, Events
 
 Array = NDArray[np.float64]
@@ -28,6 +29,9 @@ MISMATCH = 0.05
 #: Variance that a step leaves open in a log ratio, in squared thresholds, and the neighbourhood it is judged over. On
 #: simulated recordings 1/48 to 1/12 gain 0 to 1.7 dB, most in slow scenes; more takes sharpness from fast ones.
 DAMPING, DAMPING_PIXELS = 1 / 48, 5
+#: Natural log by which light at the ceiling may exceed it, one standard deviation: it gives way to any neighbour that
+#: knows better by the events between, and still holds a region together that is clipped in all of them.
+CLIPPED_NOISE = np.float32(1.0)
 
 
 @dataclass(frozen=True)
@@ -76,6 +80,43 @@ def own_evidence(
     c = contrast.mean
     variance = noise**2 + np.where(steps > 0, c**2 / 48, 0.0) + (MISMATCH * c) ** 2 * steps
     return Evidence(value, 1.0 / variance)
+
+
+def log_noise(noise: Image, light: Image, clipped: NDArray[np.bool_] | None) -> Image:
+    """Tell the standard deviation of a frame's log light.
+
+    Parameters
+    ----------
+    noise : ndarray of float32, shape (H, W)
+        Standard deviation of the frame's light.
+    light : ndarray of float32, shape (H, W)
+    clipped : ndarray of bool, shape (H, W), optional
+        Pixels at the frame's ceiling, which say no more than "at least".
+
+    Returns
+    -------
+    ndarray of float32, shape (H, W)
+    """
+    relative: Image = np.asarray(noise / (np.maximum(light, 0) + LOG_FLOOR), np.float32)
+    if clipped is not None:
+        relative[clipped] = np.maximum(relative[clipped], CLIPPED_NOISE)
+    return relative
+
+
+def at_least(latent: Array, own: Array, clipped: NDArray[np.bool_] | None) -> Array:
+    """Hold a log latent to the one thing a clipped pixel says: it was at least as light as by its own double integral.
+
+    Parameters
+    ----------
+    latent, own : ndarray of float64, shape (H, W)
+        By all evidence, and by the key's own, whose light stands at the ceiling where it is clipped.
+    clipped : ndarray of bool, shape (H, W), optional
+
+    Returns
+    -------
+    ndarray of float64, shape (H, W)
+    """
+    return latent if clipped is None else np.where(clipped, np.maximum(latent, own), latent)
 
 
 def damped(ratio: Array, contrast: float) -> Array:
