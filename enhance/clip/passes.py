@@ -15,6 +15,7 @@ from enhance.calibrate import calibrate as calibrate_recording
 from enhance.calibrate import rig_picture, rig_text
 from enhance.clip.held_out import Judged, judge
 from enhance.clip.keys import Keys
+from enhance.clip.level import levelled
 from enhance.clip.outputs import Outputs
 from enhance.clip.pictures import Pictures
 from enhance.clip.plan import Plan, make_plan
@@ -124,7 +125,7 @@ def calibrate(settings: ClipSettings, progress: Progress) -> Rig:
     """
     progress(0, 1, "measuring the rig")
     with opened(settings) as recording:
-        rig = measured_rig(recording, range(len(recording.frames)), settings)
+        rig = levelled(recording, range(len(recording.frames)), settings, measured_rig).rig
         picture = rig_picture(recording, range(len(recording.frames)), rig)
     write_text(settings.output.folder / "rig.toml", rig_text(rig))
     if picture is not None:
@@ -178,9 +179,10 @@ def _run(recording: Recording, settings: ClipSettings, state: _Progress) -> Clip
     count = len(recording.frames)
     state.report(0, 1, "measuring the rig")
     with state.stage("calibrate"):
-        rig = measured_rig(recording, range(count), settings)
+        level = levelled(recording, range(count), settings, measured_rig)
+        rig = level.rig
     network = load_fusion(settings)
-    keys = Keys(recording.frames, range(count), events_on_frames(recording, rig), rig, network)
+    keys = Keys(level.recording.frames, range(count), events_on_frames(recording, rig), rig, network)
     plan = make_plan(settings, keys.times_us)
     every = settings.hold_out if settings.hold_out and count > settings.hold_out else 0
     held = [i for i in range(count) if every and i % every and i < every * ((count - 1) // every)]
@@ -197,6 +199,7 @@ def _run(recording: Recording, settings: ClipSettings, state: _Progress) -> Clip
         "pictures": dict(counts),
         "deblurring": sharp,
         "lost_events": lost_figures(rig),
+        "clipped": level.figures,
         "expected_psnr": expected_summary(outputs.expected, settings.least_psnr),
         "cautions": cautions.LONG,
     }
@@ -206,7 +209,7 @@ def _run(recording: Recording, settings: ClipSettings, state: _Progress) -> Clip
         else:
             figures["held_out"] = None
     outputs.record("quality.json", figures)
-    notes = (*_notes(recording, rig, plan, counts), *_overlap_notes(keys), *_trust_notes(settings, outputs))
+    notes = (*_notes(recording, rig, plan, counts), *level.notes, *_overlap_notes(keys), *_trust_notes(settings, outputs))
     return ClipResult(tuple(outputs.files), dict(counts), notes, figures, state.timings)
 
 
@@ -262,10 +265,11 @@ def _judge_all(
     count = len(recording.frames)
     keys = range(0, count, every)
     try:
-        rig = measured_rig(recording, keys, settings)
+        level = levelled(recording, keys, settings, measured_rig)
     except CalibrationError as error:
         return {"keys": f"every {every}. frame", "pictures": 0, "reason": f"the second pass cannot be made: {error}"}
-    pictures = Pictures(Keys(recording.frames, keys, events_on_frames(recording, rig), rig, network))
+    events = events_on_frames(recording, level.rig)
+    pictures = Pictures(Keys(level.recording.frames, keys, events, level.rig, network))
     judged: list[Judged] = []
     for index in held:
         one = judge(pictures, index)

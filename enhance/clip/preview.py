@@ -7,6 +7,7 @@ from pathlib import Path
 import numpy as np
 
 from enhance.clip.keys import Keys
+from enhance.clip.level import levelled
 from enhance.clip.outputs import write_one
 from enhance.clip.passes import load_fusion, measured_rig
 from enhance.clip.pictures import Pictures
@@ -38,9 +39,10 @@ def preview(settings: ClipSettings, folder: Path) -> list[Path]:
         count = len(recording.frames)
         first = _busiest(recording) if count > 1 else 0
         near = range(max(0, first - KEYS // 2), min(count, first + KEYS // 2))
-        rig = measured_rig(recording, near, settings)
+        level = levelled(recording, near, settings, measured_rig)
+        rig = level.rig
         network = load_fusion(settings) if count > 1 else None
-        keys = Keys(recording.frames, near, events_on_frames(recording, rig), rig, network)
+        keys = Keys(level.recording.frames, near, events_on_frames(recording, rig), rig, network)
         pictures = Pictures(keys)
         light = recording.frames.light
         start = keys.times_us[0]

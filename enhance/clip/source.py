@@ -7,7 +7,7 @@ from contextlib import contextmanager
 
 import numpy as np
 
-from enhance.calibrate import in_steady_light
+from enhance.calibrate import as_tabled, in_steady_light
 from enhance.read import open_events, open_frames, read_triggers
 from enhance.recording import FrameSource, Recording
 from enhance.rig import Rig, RiggedEvents
@@ -36,7 +36,7 @@ def opened(settings: ClipSettings) -> Iterator[Recording]:
     JobError
         If a setting does not fit the files.
     """
-    frames = open_frames(settings.frames)
+    frames = as_tabled(open_frames(settings.frames))
     try:
         events = open_events(settings.events, frames.full_size)
         try:
@@ -69,7 +69,8 @@ def light_remarks(frames: FrameSource) -> tuple[str, ...]:
     tuple of str
     """
     some = np.unique(np.linspace(0, len(frames) - 1, min(len(frames), LOOKED_AT)).round().astype(int))
-    images = [frames.frame(int(index)).image for index in some]
+    looked_at = [frames.frame(int(index)) for index in some]
+    images = [frame.image * np.float32(frame.scale) for frame in looked_at]
     over = float(np.mean([np.mean(image > 1 + OUTSIDE) for image in images]))
     under = float(np.mean([np.mean(image < -OUTSIDE) for image in images]))
     remarks = []
