@@ -18,6 +18,7 @@ from enhance.calibrate.frame_noise import estimate_frame_noise
 from enhance.calibrate.known_view import NO_LENS, keys_near, on_sensor, view_of
 from enhance.calibrate.ramp import estimate_ramp
 from enhance.calibrate.registration import METHOD, ChangeMaps, Found, register, register_near
+from enhance.calibrate.registration_search import distance
 from enhance.calibrate.rig import _events, known_rig
 from enhance.calibrate.rig import calibrate as calibrate_matched
 from enhance.calibrate.rig_file import as_written
@@ -32,6 +33,9 @@ from enhance.view import Lens, View
 START = (0.2, 0.2)
 #: How far apart offsets are tried around the measured one when clock and registration are brought to agree.
 APART_US = 1_500
+#: What an offset that far off must add to the unexplained part, 1 - correlation^2, so that clock and map can be told
+#: apart: where all moves one way, each makes up for the other.
+LEAST_RISE = 0.05
 #: The activity's search: its range, step, the keys looked at and how far they may reach, and when it tells anything.
 RANGE_US, BIN_US, KEYS, REACH_US, LEAST_ACTIVITY = 2_000_000, 5_000, 48, 20_000_000, 0.5
 #: A first map that fits as well as this needs no other offset.
@@ -59,20 +63,20 @@ def calibrate(recording: Recording, keys: Sequence[int], settings: RigSettings) 
     CalibrationError
         If the clock, the thresholds or where the sensor looks cannot be told, or the rig file does not fit.
     """
-    rig = known_rig(recording, settings)
+    rig, doubt_us = known_rig(recording, settings), 0
     if settings.registration == "estimate" and rig.registration.value is None:
         try:
-            rig = _looked_for(rig, recording, keys, settings)
+            rig, doubt_us = _looked_for(rig, recording, keys, settings)
         except CalibrationError as error:
             return _unknown(rig, recording, settings, error)
     if view_of(rig, recording).shift is not None:
         matched = calibrate_matched(recording, keys, _matched(settings, rig))
-        return as_written(_with_view(matched, rig))
+        return as_written(_doubted(_with_view(matched, rig), doubt_us))
     seen = on_sensor(recording, view_of(rig, recording))
     measured = _with_view(calibrate_matched(seen, keys, _matched(settings)), rig)
     if measured.offset_us.value is not None and known_rig(recording, settings).frame_noise.value is None:
         measured = replace(measured, frame_noise=_frame_noise(measured, recording, keys))
-    return as_written(measured)
+    return as_written(_doubted(measured, doubt_us))
 
 
 def _matched(settings: RigSettings, rig: Rig | None = None) -> RigSettings:
@@ -80,6 +84,14 @@ def _matched(settings: RigSettings, rig: Rig | None = None) -> RigSettings:
     matrix = np.eye(3).tolist() if rig is None else rig.registration.value
     given = "shared" if matrix is None else tuple(tuple(row) for row in matrix)
     return replace(settings, registration=given, frame_lens=None, event_lens=None)
+
+
+def _doubted(rig: Rig, doubt_us: int) -> Rig:
+    """Say of the offset what the map leaves open."""
+    if not doubt_us or rig.offset_us.value is None:
+        return rig
+    uncertainty = float(np.hypot(rig.offset_us.uncertainty or 0.0, doubt_us))
+    return replace(rig, offset_us=replace(rig.offset_us, uncertainty=uncertainty))
 
 
 def _with_view(rig: Rig, known: Rig) -> Rig:
@@ -111,11 +123,11 @@ def _unknown(rig: Rig, recording: Recording, settings: RigSettings, error: Calib
     return replace(rig, registration=reason, offset_us=reason, **left)
 
 
-def _looked_for(rig: Rig, recording: Recording, keys: Sequence[int], settings: RigSettings) -> Rig:
-    """Estimate the registration, with the clock where that is not known either."""
+def _looked_for(rig: Rig, recording: Recording, keys: Sequence[int], settings: RigSettings) -> tuple[Rig, int]:
+    """Estimate the registration, with the clock where that is not known either; and what it leaves open of that."""
     if rig.offset_us.value is not None:
         maps = _maps(rig, recording, keys, int(rig.offset_us.value))
-        return _told(rig, recording, register(maps))
+        return _told(rig, recording, register(maps)), 0
     offsets = [_starts(recording), *_by_activity(recording, keys)]
     found, offset_us = _first(rig, recording, keys, offsets)
     rig = _told(rig, recording, found)
@@ -131,7 +143,16 @@ def _looked_for(rig: Rig, recording: Recording, keys: Sequence[int], settings: R
     below, at, above = (tried[late].correlation for late in (-APART_US, 0, APART_US))
     bend = below - 2 * at + above
     late = round(float(np.clip(APART_US * 0.5 * (below - above) / bend, -APART_US, APART_US))) if bend < 0 else 0
-    return _told(rig, recording, register_near(maps, tried[0].matrix, late))
+    found = register_near(maps, tried[0].matrix, late)
+    rise = (1 - (below**2 + above**2) / 2) / max(1 - at**2, 1e-9) - 1
+    if rise > LEAST_RISE:
+        return _told(rig, recording, found), 0
+    apart = distance(tried[-APART_US].matrix, tried[APART_US].matrix, recording.events.size[::-1])
+    doubt = apart / 2 / View(found.matrix).pitch(recording.events.size)
+    found = replace(found, uncertainty_px=float(np.hypot(found.uncertainty_px or 0.0, doubt)))
+    remark = f"; all moves one way: an offset {APART_US / 1000:g} ms off is made up for by the map"
+    rig = _told(rig, recording, found)
+    return replace(rig, registration=replace(rig.registration, evidence=rig.registration.evidence + remark)), APART_US
 
 
 def _first(rig: Rig, recording: Recording, keys: Sequence[int], offsets: Sequence[int]) -> tuple[Found, int]:

@@ -125,8 +125,8 @@ def _thresholds(pairs: Sequence[Pair], events: EventSource, rig: Rig) -> Canvas:
         f"cyan, {minus:.3f} taken",
         "single pixels read high: the part-filled thresholds at either end are theirs alone",
     )
-    for found, colour, taken in zip(samples, (_RED, _CYAN), (plus, minus), strict=True):
-        count = np.histogram(np.concatenate(found), edges)[0].astype(np.float64)
+    for single, colour, taken in zip(samples, (_RED, _CYAN), (plus, minus), strict=True):
+        count = np.histogram(np.concatenate(single), edges)[0].astype(np.float64)
         centre = 2 * (edges[:-1] + edges[1:]) / 2 / HIGHEST - 1
         _drawn(canvas, centre, count / max(count.max(), 1.0), colour, 2 * float(taken) / HIGHEST - 1)
     return canvas
