@@ -26,6 +26,8 @@ LEAST_CYCLES = 8
 #: Parts of the picture, each way, that must swing in step; how much of their swing survives when they are added up
 #: (random phases of 16 parts: 0.25); the peak's power over the median around it; and its amplitude over that of noise.
 PARTS, IN_STEP, OVER_MEDIAN, OVER_NOISE = 4, 0.6, 30.0, 5.0
+#: Swing of all other parts together, in that of the strongest one.
+ELSEWHERE = 0.5
 #: A lower frequency is the lamp's own if this many times lower and at least this part of the peak's power.
 DIVISORS, LEAST_POWER = (4, 3, 2), 0.02
 #: Harmonics of one cycle of the lamp's log light.
@@ -82,8 +84,8 @@ class Lamp:
     @property
     def swing(self) -> float:
         """From the darkest to the brightest instant, in units of the positive threshold."""
-        cycle = self.origin_us + np.arange(400) * (1e6 / self.frequency_hz / 400)
-        return float(np.ptp(self.level(cycle)))
+        cycle = np.rint(np.arange(400) * (1e6 / self.frequency_hz / 400)).astype(np.int64)
+        return float(np.ptp(self.level(self.origin_us + cycle)))
 
 
 def _waves(t_us: NDArray[np.int64], frequency_hz: float) -> NDArray[np.float64]:
@@ -157,6 +159,9 @@ def _of_window(events: Events, window: tuple[int, int], size: tuple[int, int]) -
     noise = max(float((np.hanning(bins) ** 2).mean()) * len(t), 1.0)
     significant = whole > np.maximum(OVER_NOISE**2 * noise, OVER_MEDIAN * _median_around(whole))
     step = np.abs(spectrum.sum(axis=0)) >= IN_STEP * np.abs(spectrum).sum(axis=0)
+    # something that blinks in one part of the picture is not what lights it
+    largest = np.abs(spectrum).max(axis=0)
+    step &= np.abs(spectrum.sum(axis=0)) >= (1 + ELSEWHERE) * largest
     chosen = band & significant & step
     if not chosen.any():
         return None, "no frequency at which the whole picture brightens and darkens in step"
@@ -253,7 +258,7 @@ def _fit(events: Events, frequency_hz: float, size: tuple[int, int], ratio: floa
     change = count[:, 0] - ratio * count[:, 1]
     waves = (_waves(ends[:, 1], frequency_hz) - _waves(ends[:, 0], frequency_hz)).T
     weight = np.ones(len(change))
-    fit = np.zeros(2 * HARMONICS)
+    fit: NDArray[np.floating] = np.zeros(2 * HARMONICS)
     for _ in range(ROUNDS):
         weighted = waves * weight[:, None]
         fit = np.linalg.lstsq(weighted.T @ waves, weighted.T @ change, rcond=None)[0]

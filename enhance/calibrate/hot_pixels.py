@@ -24,7 +24,7 @@ COMPARED = 2
 #: quiet (this many events at the most): there must be as many such slices, and this share of all.
 QUIET_EVENTS, LEAST_QUIET, QUIET_SHARE = 1, 4, 0.25
 #: A dead pixel tells nothing while each of its neighbours, but for one that may be dead as well, tells this much.
-DEAD_NEIGHBOURS, QUIETEST = 30, 1
+DEAD_NEIGHBOURS, QUIETEST = 15, 1
 
 
 def find_hot_pixels(events: EventSource) -> Quantity:
@@ -68,7 +68,8 @@ def find_dead_pixels(events: EventSource) -> Quantity:
     Parameters
     ----------
     events : EventSource
-        In the sensor's own world; a lamp's flicker, if there is one, still in it.
+        In the sensor's own world, as under steady light: a swing of the lamp that a pixel's own thresholds just do not
+        reach leaves it silent among neighbours that tell each cycle.
 
     Returns
     -------
@@ -92,7 +93,7 @@ def find_dead_pixels(events: EventSource) -> Quantity:
 
 
 def _slices(events: EventSource) -> tuple[list[int], int]:
-    """Starts and length of the slices that are looked at."""
+    """Give the starts and the length of the slices that are looked at."""
     span = events.last_us + 1 - events.first_us
     slices = int(np.clip(span // SHORT_SLICE_US, LEAST_SLICES, SLICES))
     length = min(SLICE_US, max(1, span // slices))

@@ -20,8 +20,8 @@ from enhance.rig import Quantity
 BIN_US, BLOCK_BINS, MOST_EVENTS = 1_000, 128, 4_000_000
 #: Blocks looked at: three and a half hours.
 MOST_BLOCKS = 100_000
-#: Bins either side that a gap is compared with, events that it must lack, and how much of that rate there must be
-#: right at its ends: what comes to rest by itself takes longer.
+#: Bins either side that a gap is compared with (or as many as it has, if more), events that it must lack, and how much
+#: of that rate there must be right at its ends: what comes to rest by itself takes longer.
 AROUND, LEAST_LACKING, ABRUPT = 10, 25.0, 0.3
 #: Where rests are common (a lamp that turns, a scene that stops and goes), a gap is this many times as long as most.
 MANY_RESTS, TIMES_USUAL = 5, 2.5
@@ -139,7 +139,8 @@ def _gaps(rate: NDArray[np.int64], first_us: int) -> list[Lost]:
     length = runs[:, 1] - runs[:, 0]
     quiet = float(np.percentile(rate[rate > 0], 5)) if (rate > 0).any() else 0.0
     for (start, end), long in zip(runs, length, strict=True):
-        before, after = rate[max(0, start - AROUND) : start], rate[end : end + AROUND]
+        around = max(AROUND, int(long))
+        before, after = rate[max(0, start - around) : start], rate[end : end + around]
         if len(before) < 2 or len(after) < 2:
             continue
         usual = min(float(before.mean()), float(after.mean()))
@@ -150,7 +151,8 @@ def _gaps(rate: NDArray[np.int64], first_us: int) -> list[Lost]:
             continue
         sure = 1.0 if quiet * long >= LEAST_LACKING else 0.7
         # whole bins are empty: it may reach into those beside them
-        found.append(Lost(first_us + (start - 1) * BIN_US, first_us + (end + 1) * BIN_US, "gap", 1.0, sure))
+        begin, until = int(first_us + (start - 1) * BIN_US), int(first_us + (end + 1) * BIN_US)
+        found.append(Lost(begin, until, "gap", 1.0, sure))
     return found
 
 
@@ -165,8 +167,8 @@ def _plateaus(rate: NDArray[np.int64], first_us: int) -> list[Lost]:
         if end - start < PLATEAU_BINS or inner.var() > CALM**2 * inner.mean():
             continue
         detail = f" at {inner.mean() * 1e6 / BIN_US / 1e6:.2f} million events a second"
-        whole = (first_us + start * BIN_US, first_us + end * BIN_US)
-        found.append(Lost(*(int(t) for t in whole), "plateau", PLATEAU_LOST, 0.9, detail))
+        begin, until = int(first_us + start * BIN_US), int(first_us + end * BIN_US)
+        found.append(Lost(begin, until, "plateau", PLATEAU_LOST, 0.9, detail))
     return found
 
 

@@ -72,9 +72,9 @@ def calibrate(recording: Recording, keys: Sequence[int], settings: RigSettings) 
         rig = replace(rig, flicker_hz=find_flicker(recording.events))
     # of this very recording, whatever a rig file says
     rig = replace(rig, lost=find_lost(recording.events))
+    recording = replace(recording, events=in_steady_light(recording.events, rig))
     if rig.dead_pixels.value is None:
         rig = replace(rig, dead_pixels=find_dead_pixels(recording.events))
-    recording = replace(recording, events=in_steady_light(recording.events, rig))
     if rig.hot_pixels.value is None:
         rig = replace(rig, hot_pixels=find_hot_pixels(recording.events))
     rig, recording = in_known_row_time(rig, recording, keys, settings, _events, _first_guess(recording)[0])

@@ -155,9 +155,9 @@ class SteadyEvents:
             for k in range(2):
                 counts[k] += np.bincount(pixel, weights=count[:, k], minlength=pixels)
         # neighbours are mostly lit alike, and one pixel's events are few
-        both, own = (cv2.blur(a.reshape(height, width), (3, 3)).ravel() for a in (both, own))
+        near_both, near_own = (cv2.blur(a.reshape(height, width), (3, 3)).ravel() for a in (both, own))
         prior = SHARE_PRIOR * lamp.swing**2 / 8
-        share = np.clip((both + prior) / (own + prior), 0.0, MOST_SHARE)
+        share = np.clip((near_both + prior) / (near_own + prior), 0.0, MOST_SHARE)
         share[share < LEAST_SHARE] = 0.0
         # N+ c+ = N- c- at each pixel, as far as its events go beyond what is usual
         ratio = (counts[0] + RATIO_PRIOR * lamp.ratio) / (counts[1] + RATIO_PRIOR)
