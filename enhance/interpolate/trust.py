@@ -44,6 +44,9 @@ CAUSES = (
     "thresholds over the keys' exposures",
     "light that came and went",
     "edges where events fired",
+    "fine detail where events fired",
+    "edges and how far they move",
+    "edges and how little their motion is steady",
     "neighbour re-exposed",
     "events miss the keys' difference",
 )
@@ -125,6 +128,8 @@ def cause_maps(candidates: Candidates, picture: Map, spread: Map, miss: Map, lig
     lit = (np.maximum(picture, 0) * slope) ** 2
     w = np.float32(candidates.weight)
     between = w * (1 - w) * 4
+    edges, fired = _edges(made), candidates.counts.sum(axis=0) > 0
+    to_left, to_right = candidates.flows
     maps = [
         np.full_like(made, FLOOR),
         (rig.noise(np.clip(picture, 0, 1)) * slope) ** 2,
@@ -139,7 +144,10 @@ def cause_maps(candidates: Candidates, picture: Map, spread: Map, miss: Map, lig
         lit * _of_events(candidates.counts.min(axis=0), rig.contrast.mean),
         lit * _of_events(candidates.exposed.mean(axis=0), rig.contrast.mean),
         lit * (rig.contrast.mean * np.minimum(candidates.counts.sum(axis=0), 40)) ** 2,
-        _edges(made) * (candidates.counts.sum(axis=0) > 0),
+        edges * fired,
+        (made - cv2.GaussianBlur(made, (3, 3), 0)) ** 2 * fired,
+        edges * _motion(to_right - to_left),
+        edges * _motion((1 - w) * to_left + w * to_right),
         lit * np.clip(miss, -2, 2) ** 2,
         between * lit * np.clip(candidates.mismatch, -2, 2) ** 2,
     ]
@@ -167,13 +175,12 @@ def frame_cause_maps(sides: Map, flow: Map, picture: Map, light: Light, rig: Rig
     """
     own, made = own_signal(sides, light), own_signal(picture, light)
     slope = _slope(picture, light)
-    way = np.minimum(flow[..., 0] ** 2 + flow[..., 1] ** 2, np.float32(100.0))
     return _averaged(
         [
             np.full_like(made, FLOOR),
             (rig.noise(np.clip(picture, 0, 1)) * slope) ** 2,
             (own[0] - own[1]) ** 2,
-            _edges(made) * way,
+            _edges(made) * _motion(flow),
         ]
     )
 
@@ -236,6 +243,11 @@ def _edges(own: Map) -> Map:
     dx = cv2.Sobel(own, cv2.CV_32F, 1, 0, scale=1 / 8)
     dy = cv2.Sobel(own, cv2.CV_32F, 0, 1, scale=1 / 8)
     return dx**2 + dy**2
+
+
+def _motion(flow: Map) -> Map:
+    """Squared length of each pixel's motion, (H, W, 2) to (H, W), pixels squared; beyond ten pixels all are as bad."""
+    return np.minimum(flow[..., 0] ** 2 + flow[..., 1] ** 2, np.float32(100.0))
 
 
 def _averaged(maps: Sequence[Map]) -> Map:

@@ -42,7 +42,7 @@ SPANS, KEYS_USED, INSTANTS = 4, 4, 2
 LEAST_ERROR = 1e-8
 #: Fitting: steps, rate, the deviation in ln of the squared error beyond which a picture pulls no harder, and how dear
 #: powers are.
-STEPS, RATE, HUBER, PRICE = 1_500, 0.03, 1.0, 0.02
+STEPS, RATE, HUBER, PRICE = 1_500, 0.03, 1.0, 0.1
 #: What trust should reach on recordings it was not fitted on.
 WITHIN_DB = 2.0
 
@@ -226,7 +226,11 @@ def run_trust(
     Path
     """
     rows = partial(_rows, weights, seed, processes, progress)
-    fitted_on, judged = rows(recordings, False), rows(held_out, True)
+    return write_trust_model(folder, rows(recordings, False), rows(held_out, True), seed)
+
+
+def write_trust_model(folder: Path, fitted_on: Sequence[Row], judged: Sequence[Row], seed: int) -> Path:
+    """Fit on some pictures, judge by others, and write ``trust.json`` into a folder."""
     table: dict[str, Any] = {"kinds": {}, "held_out": {}}
     for kind, causes in KINDS.items():
         fitted = fit([row for row in fitted_on if row.kind == kind])
@@ -235,7 +239,8 @@ def run_trust(
         found = figures([row for row in judged if row.kind == kind], fitted)
         table["held_out"][kind] = {name: None if v is None else round(v, 3) for name, v in found.items()}
         logger.info("trust in pictures %s: %s", kind, table["held_out"][kind])
-    table["fitted_on"] = f"{recordings} simulated recordings, seed {seed}; judged on {held_out} others"
+    counts = [len({row.recording for row in rows}) for rows in (fitted_on, judged)]
+    table["fitted_on"] = f"{counts[0]} simulated recordings, seed {seed}; judged on {counts[1]} others"
     path = folder / "trust.json"
     write_text(path, json.dumps(table, indent=1) + "\n")
     return path
