@@ -23,6 +23,7 @@ from enhance.clip.quality import below_count, expected_notes, expected_summary, 
 from enhance.clip.remarks import lost_figures, rig_remarks
 from enhance.clip.source import events_on_frames, light_remarks, opened
 from enhance.errors import CalibrationError
+from enhance.interpolate.trust import TrustModel, load_trust
 from enhance.measure import sharpness
 from enhance.recording import By, Kind, Recording
 from enhance.rig import Rig
@@ -35,7 +36,7 @@ if TYPE_CHECKING:
 
 #: Done, total, what.
 Progress = Callable[[int, int, str], None]
-WEIGHTS = "fusion.safetensors"
+WEIGHTS, TRUST = "fusion.safetensors", "trust.json"
 
 
 @dataclass(frozen=True)
@@ -166,6 +167,11 @@ def measured_rig(recording: Recording, keys: range, settings: ClipSettings) -> R
     return rig
 
 
+def load_shipped_trust() -> TrustModel:
+    """Load what the expected errors rest on."""
+    return load_trust(shipped_folder("models") / TRUST)
+
+
 def load_fusion(settings: ClipSettings) -> FusionNetwork | None:
     """Load the fusion network a job asks for; None where it is off."""
     if settings.network == "off":
@@ -181,8 +187,8 @@ def _run(recording: Recording, settings: ClipSettings, state: _Progress) -> Clip
     with state.stage("calibrate"):
         level = levelled(recording, range(count), settings, measured_rig)
         rig = level.rig
-    network = load_fusion(settings)
-    keys = Keys(level.recording.frames, range(count), events_on_frames(recording, rig), rig, network)
+    network, trust = load_fusion(settings), load_shipped_trust()
+    keys = Keys(level.recording.frames, range(count), events_on_frames(recording, rig), rig, network, trust)
     plan = make_plan(settings, keys.times_us)
     every = settings.hold_out if settings.hold_out and count > settings.hold_out else 0
     held = [i for i in range(count) if every and i % every and i < every * ((count - 1) // every)]
@@ -205,11 +211,16 @@ def _run(recording: Recording, settings: ClipSettings, state: _Progress) -> Clip
     }
     with state.stage("held_out"):
         if held:
-            figures["held_out"] = _judge_all(recording, settings, network, every, held, outputs, state)
+            figures["held_out"] = _judge_all(recording, settings, (network, trust), every, held, outputs, state)
         else:
             figures["held_out"] = None
     outputs.record("quality.json", figures)
-    notes = (*_notes(recording, rig, plan, counts), *level.notes, *_overlap_notes(keys), *_trust_notes(settings, outputs))
+    notes = (
+        *_notes(recording, rig, plan, counts),
+        *level.notes,
+        *_overlap_notes(keys),
+        *_trust_notes(settings, outputs),
+    )
     return ClipResult(tuple(outputs.files), dict(counts), notes, figures, state.timings)
 
 
@@ -255,7 +266,7 @@ def _sharpness(image: np.ndarray, light: Any) -> float | None:
 def _judge_all(
     recording: Recording,
     settings: ClipSettings,
-    network: FusionNetwork | None,
+    models: tuple[FusionNetwork | None, TrustModel],
     every: int,
     held: list[int],
     outputs: Outputs,
@@ -269,7 +280,7 @@ def _judge_all(
     except CalibrationError as error:
         return {"keys": f"every {every}. frame", "pictures": 0, "reason": f"the second pass cannot be made: {error}"}
     events = events_on_frames(recording, level.rig)
-    pictures = Pictures(Keys(level.recording.frames, keys, events, level.rig, network))
+    pictures = Pictures(Keys(level.recording.frames, keys, events, level.rig, *models))
     judged: list[Judged] = []
     for index in held:
         one = judge(pictures, index)
@@ -287,8 +298,14 @@ def _notes(recording: Recording, rig: Rig, plan: Plan, counts: Counter[str]) -> 
         notes.append(f"the clock of the events cannot be told ({rig.offset_us.evidence}): every picture is from frames")
     elif counts[Kind.CAPTURED]:
         notes.append(f"keys that stay as captured (sharp already, or not covered by events): {counts[Kind.CAPTURED]}")
+    if rig.clock_check.value is not None and rig.clock_check.evidence:
+        notes.append(rig.clock_check.evidence)
     if counts["inserted from frames alone"]:
         notes.append(f"pictures inserted from frames alone, without events: {counts['inserted from frames alone']}")
+    if rig.row_time_us.value:
+        row_time = rig.row_time_us
+        how = f" ({row_time.method}: {row_time.evidence})" if row_time.evidence else ""
+        notes.append(f"rolling shutter, {row_time.value:.3f} us from row to row{how}: pictures are of one instant")
     for name in ("contrast_positive", "contrast_negative"):
         quantity = getattr(rig, name)
         if quantity.method == "assumed":
@@ -296,7 +313,3 @@ def _notes(recording: Recording, rig: Rig, plan: Plan, counts: Counter[str]) -> 
     if len(recording.frames) == 1:
         notes.append("one frame only: no clip is made")
     return tuple(notes)
-    if rig.row_time_us.value:
-        row_time = rig.row_time_us
-        how = f" ({row_time.method}: {row_time.evidence})" if row_time.evidence else ""
-        notes.append(f"rolling shutter, {row_time.value:.3f} us from row to row{how}: pictures are of one instant")

@@ -9,7 +9,7 @@ import numpy as np
 from enhance.clip.keys import Keys
 from enhance.clip.level import levelled
 from enhance.clip.outputs import write_one
-from enhance.clip.passes import load_fusion, measured_rig
+from enhance.clip.passes import load_fusion, load_shipped_trust, measured_rig
 from enhance.clip.pictures import Pictures
 from enhance.clip.source import events_on_frames, opened
 from enhance.light import Image, Light, luma
@@ -42,7 +42,7 @@ def preview(settings: ClipSettings, folder: Path) -> list[Path]:
         level = levelled(recording, near, settings, measured_rig)
         rig = level.rig
         network = load_fusion(settings) if count > 1 else None
-        keys = Keys(level.recording.frames, near, events_on_frames(recording, rig), rig, network)
+        keys = Keys(level.recording.frames, near, events_on_frames(recording, rig), rig, network, load_shipped_trust())
         pictures = Pictures(keys)
         light = recording.frames.light
         start = keys.times_us[0]
