@@ -23,7 +23,6 @@ from enhance.calibrate.drift import (
 )
 from enhance.calibrate.even_light import lamp_told
 from enhance.calibrate.evidence import Pair, gather_pairs
-from enhance.calibrate.flicker import find_flicker
 from enhance.calibrate.frame_noise import estimate_frame_noise
 from enhance.calibrate.hot_pixels import find_dead_pixels, find_hot_pixels
 from enhance.calibrate.known_view import known_view
@@ -31,7 +30,7 @@ from enhance.calibrate.lost import find_lost
 from enhance.calibrate.ramp import estimate_ramp
 from enhance.calibrate.rig_file import as_written, read_rig
 from enhance.calibrate.rolling import in_known_row_time, known_row_time
-from enhance.calibrate.steady import in_steady_light
+from enhance.calibrate.steady import flicker_of, in_steady_light
 from enhance.calibrate.time_marks import check_clock, edge_of_offset
 from enhance.calibrate.triggers import clock_from_triggers
 from enhance.errors import CalibrationError
@@ -69,7 +68,7 @@ def calibrate(recording: Recording, keys: Sequence[int], settings: RigSettings) 
     """
     rig = known_rig(recording, settings)
     if rig.flicker_hz.value is None:
-        rig = replace(rig, flicker_hz=find_flicker(recording.events))
+        rig = replace(rig, flicker_hz=flicker_of(recording.events))
     # of this very recording, whatever a rig file says
     rig = replace(rig, lost=find_lost(recording.events))
     recording = replace(recording, events=in_steady_light(recording.events, rig))

@@ -9,11 +9,13 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from enhance.calibrate.flicker import Lamp, fit_lamp, look_windows
+from enhance.calibrate.flicker import Lamp, find_flicker, fit_lamp, look_windows
 from enhance.kernels.flicker import long_differences, steady_steps
 from enhance.recording import Events, EventSource
-from enhance.rig import STEADY_PARTS, Rig
+from enhance.rig import STEADY_PARTS, Quantity, Rig
 
+#: Swing of a lamp, in thresholds, below which what scenes do by themselves (labels that pass, waves) looks alike.
+LEAST_SWING = 0.4
 #: Length of the pieces the events are worked on in, and how far before each the pixels' state is run in.
 PIECE_US, RUN_IN_US = 250_000, 150_000
 #: Time in which what is left of a threshold fades, and how long before an event its change began at the most.
@@ -24,6 +26,29 @@ KEPT = 3
 SHARE_PRIOR, RATIO_PRIOR = 4.0, 12.0
 #: A pixel that follows the lamp less than this does not see it; no pixel follows it more than this.
 LEAST_SHARE, MOST_SHARE = 0.25, 1.3
+
+
+def flicker_of(source: EventSource) -> Quantity:
+    """Find the frequency of a lamp whose flicker is worth taking out.
+
+    Parameters
+    ----------
+    source : EventSource
+        In the sensor's own world.
+
+    Returns
+    -------
+    Quantity
+        Hertz; None, with the reason, where no flicker shows, or one that hardly fires events of its own.
+    """
+    found = find_flicker(source)
+    if found.value is None:
+        return found
+    swing = SteadyEvents(source, float(found.value)).lamp.swing
+    if swing >= LEAST_SWING:
+        return found
+    reason = f"{found.value:.1f} Hz shows in the events, but swings by {swing:.2f} thresholds only: left alone"
+    return Quantity(None, None, found.method, reason)
 
 
 def in_steady_light(source: EventSource, rig: Rig) -> EventSource:

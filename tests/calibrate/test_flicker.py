@@ -158,3 +158,12 @@ def test_without_a_lamp_events_and_frames_are_the_very_same():
     frames = simulated.recording.frames
     assert evenly_lit(frames, placed(simulated, rig), rig) is frames
     assert rig.parts == 1
+
+
+def test_a_scene_that_repeats_by_itself_is_not_taken_for_a_lamp() -> None:
+    """A printed label passing by, under steady light: its rows repeat some 50 times a second."""
+    from enhance.calibrate.steady import flicker_of
+    from enhance.simulate.benchmark import FIRST_SEED, Benchmark
+
+    label = Benchmark("label", FIRST_SEED + 312, 16.0, 0.5, (0.2, 0.2), frames=9, size=(160, 120))
+    assert flicker_of(label.record().recording.events).value is None
