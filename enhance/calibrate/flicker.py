@@ -266,5 +266,5 @@ def _fit(events: Events, frequency_hz: float, size: tuple[int, int], ratio: floa
         # pixels at which something moves tell little of the lamp, whichever of their stretches happens to fit
         many = np.bincount(pixel, minlength=width * height)
         own = (np.bincount(pixel, weights=squared, minlength=width * height) / np.maximum(many, 1))[pixel]
-        weight = 1.0 / (TOLERANCE**2 + own)
+        weight = 1.0 / (TOLERANCE**2 + own) ** 2
     return np.asarray(fit)

@@ -23,7 +23,7 @@ FORGET_US, REACH_US = 60_000.0, 20_000.0
 #: Pieces kept.
 KEPT = 3
 #: Counts that the lamp's full share, and the recording's usual ratio of thresholds, are worth at a pixel.
-SHARE_PRIOR, RATIO_PRIOR = 4.0, 12.0
+SHARE_PRIOR, RATIO_PRIOR = 30.0, 12.0
 #: A pixel that follows the lamp less than this does not see it; no pixel follows it more than this.
 LEAST_SHARE, MOST_SHARE = 0.25, 1.3
 

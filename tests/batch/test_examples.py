@@ -41,6 +41,7 @@ def test_each_shows_its_situation(tmp_path: Path) -> None:
     found = {job.stem: read_job(beside_its_inputs(job, tmp_path / job.stem)) for job in JOBS}
     assert set(found) == {
         "demo",
+        "lamp",
         "video-source",
         "windows",
         "rig-reuse",
