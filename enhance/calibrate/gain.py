@@ -139,12 +139,12 @@ def _measured(
     quiet = _quiet(usable, fired)
     if quiet.sum() >= LEAST_QUIET:
         slope = _slope(luma(one.image)) + _slope(luma(two.image))
-        parts = _parts(ratio, quiet & (slope <= np.quantile(slope[quiet], FLATTEST)))
+        parts = _parts(ratio, quiet, slope)
         if len(parts) >= LEAST_PARTS:
             return _agreed(parts)
     middle = one.time_us
     explained = [log_blur_ratio(seen, f.start_us, f.end_us, middle, contrast, shape) for f in (one, two)]
-    return _agreed(_parts(ratio - (explained[1] - explained[0]), usable))
+    return _agreed(_parts(ratio - (explained[1] - explained[0]), usable, np.zeros_like(ratio)))
 
 
 def _quiet(usable: NDArray[np.bool_], fired: NDArray[np.bool_]) -> NDArray[np.bool_]:
@@ -168,15 +168,16 @@ def _slope(light: Image) -> Image:
     return np.asarray(np.hypot(across, down) / np.maximum(smooth, USABLE_LIGHT[0]), np.float32)
 
 
-def _parts(ratio: NDArray[np.float64], chosen: NDArray[np.bool_]) -> NDArray[np.float64]:
-    """Robust mean and number of pixels of each part of a picture that has enough of them, shape (parts, 2)."""
+def _parts(ratio: NDArray[np.float64], chosen: NDArray[np.bool_], slope: NDArray[np.floating]) -> NDArray[np.float64]:
+    """Robust mean, and number, of the flattest chosen pixels of each part that has enough of them, shape (parts, 2)."""
     height, width = ratio.shape
     parts = []
     for rows in np.array_split(np.arange(height), PARTS):
         for columns in np.array_split(np.arange(width), PARTS):
             part = slice(rows[0], rows[-1] + 1), slice(columns[0], columns[-1] + 1)
-            values = ratio[part][chosen[part]]
-            if len(values) >= PART_PIXELS:
+            values, slopes = ratio[part][chosen[part]], slope[part][chosen[part]]
+            if len(values) * FLATTEST >= PART_PIXELS:
+                values = values[slopes <= np.quantile(slopes, FLATTEST)]
                 parts.append((_centre(values), len(values)))
     return np.array(parts).reshape(-1, 2)
 

@@ -1,7 +1,7 @@
 """Fixed vertical stripes: an offset that each column of the sensor adds to every frame.
 
 Light from column to column differs by the scene, which changes from row to row and from frame to frame, and by the
-columns' offsets, which do not. So the median over rows and frames of the difference between neighbouring columns is
+columns' offsets, which do not. So the middle over rows and frames of the difference between neighbouring columns is
 that of their offsets; they follow by summing up. What is left of the scene in them is blurred and so lies in the low
 frequencies: offsets are taken to be as strong there as in the high ones, where they can be seen, and no stronger.
 """
@@ -79,7 +79,7 @@ def find_stripes(frames: FrameSource, keys: Sequence[int]) -> tuple[Image | None
 
 
 def _differences(frames: FrameSource, chosen: Sequence[int]) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
-    """Median step from column to column, shape (W - 1, C), by the odd bands of the first half and by all the rest.
+    """Usual step from column to column, shape (W - 1, C), by the odd bands of the first half and by all the rest.
 
     Bands change their half from frame to frame, so that what stands still in one band does not fill one half alone.
     """
@@ -95,16 +95,19 @@ def _differences(frames: FrameSource, chosen: Sequence[int]) -> tuple[NDArray[np
         step[~(usable[:, 1:] & usable[:, :-1])] = np.nan
         for half in (0, 1):
             halves[half].append(step[band % 2 == half])
-    return _median(halves[0]), _median(halves[1])
+    return _middle(halves[0]), _middle(halves[1])
 
 
-def _median(steps: list[Image]) -> NDArray[np.float64]:
-    """Median over rows and frames, column by column; 0 where no pixel tells."""
+def _middle(steps: list[Image]) -> NDArray[np.float64]:
+    """Mean of the middle half over rows and frames, column by column; 0 where no pixel tells.
+
+    A median of whole code values would be one of few.
+    """
     stacked = np.sort(np.concatenate(steps), axis=0)
     count = np.sum(np.isfinite(stacked), axis=0)
-    middle = np.maximum(count - 1, 0)
-    low, high = (np.take_along_axis(stacked, m[None], axis=0)[0] for m in (middle // 2, (middle + 1) // 2))
-    return np.where(count > 0, 0.5 * (low + high), 0.0).astype(np.float64)
+    place = np.arange(len(stacked)).reshape(-1, *[1] * (stacked.ndim - 1))
+    inside = (place >= count // 4) & (place < count - count // 4)
+    return np.asarray(np.where(inside, stacked, 0).sum(axis=0, dtype=np.float64) / np.maximum(inside.sum(axis=0), 1))
 
 
 def _spectrum(step: NDArray[np.float64]) -> NDArray[np.complex128]:

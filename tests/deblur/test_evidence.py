@@ -3,7 +3,7 @@
 import numpy as np
 import pytest
 
-from enhance.deblur import change_evidence, deblur, own_evidence
+from enhance.deblur import at_least, change_evidence, couple, deblur, log_noise, own_evidence
 from enhance.deblur.evidence import DAMPING, MISMATCH, damped
 from enhance.recording import Contrast, Events
 from enhance.simulate import Camera, EventSensor, make_scene, simulate
@@ -116,3 +116,21 @@ def test_an_event_exactly_at_a_border_is_counted_once_with_a_ramp_too():
     after = change_evidence(events, (1_000, 2_000), ramp, (1, 1)).value
     # the light has arrived at the border
     np.testing.assert_allclose([before[0, 0], after[0, 0]], [0.2, 0.0], atol=1e-12)
+
+
+def test_a_clipped_pixel_gives_way_to_a_neighbour_that_knows_better():
+    light, clipped = np.float32([[1.0, 1.0]]), np.array([[True, False]])
+    noise = log_noise(np.full((1, 2), 0.004, np.float32), light, clipped).astype(np.float64)
+    assert noise[0] == pytest.approx([1.0, 0.004 / (1 + 1 / 255)], rel=1e-5)
+    # its neighbour says ln 3 by way of the events, with a part-filled threshold's doubt: it is believed
+    own, change = [np.zeros((1, 2)), np.full((1, 2), np.log(3))], [np.zeros((1, 2))]
+    weights = [1 / noise**2, np.full((1, 2), 1e4)], [np.full((1, 2), 50.0)]
+    latent = couple(own, change, 0, *weights)
+    assert latent[0, 0] == pytest.approx(np.log(3), rel=0.03)
+    assert latent[0, 1] == pytest.approx(0, abs=0.01)
+
+
+def test_a_clipped_pixel_is_at_least_as_light_as_its_ceiling():
+    latent, own = np.array([[0.5, -0.5, -0.5]]), np.zeros((1, 3))
+    assert at_least(latent, own, np.array([[True, True, False]])).tolist() == [[0.5, 0.0, -0.5]]
+    assert at_least(latent, own, None) is latent
