@@ -40,6 +40,7 @@ def test_every_shipped_job_is_right(job: Path, tmp_path: Path) -> None:
 def test_each_shows_its_situation(tmp_path: Path) -> None:
     found = {job.stem: read_job(beside_its_inputs(job, tmp_path / job.stem)) for job in JOBS}
     assert set(found) == {
+        "auto-exposure",
         "demo",
         "lamp",
         "video-source",
@@ -51,6 +52,7 @@ def test_each_shows_its_situation(tmp_path: Path) -> None:
         "trust",
         "two-sensors",
     }
+    assert found["auto-exposure"].frames.mosaic == "GRBG"
     assert found["video-source"].frames.times is None
     assert [window.factor for window in found["windows"].slow_motion.windows] == [None, 32]
     assert found["rig-reuse"].rig.file is not None
