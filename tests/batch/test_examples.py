@@ -62,8 +62,6 @@ def test_each_shows_its_situation(tmp_path: Path) -> None:
     assert found["trust"].output.trust
     assert found["two-sensors"].rig.registration == "estimate"
     assert found["two-sensors"].rig.event_lens is not None
-    assert found["two-sensors"].rig.registration == "estimate"
-    assert found["two-sensors"].rig.event_lens is not None
     assert found["trust"].least_psnr == 32
 
 
