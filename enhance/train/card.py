@@ -15,7 +15,7 @@ from enhance import __version__
 from enhance.interpolate.network import INPUTS, MEMBERS, RESIDUAL, FusionNetwork, load_network, macs_per_pixel
 from enhance.simulate.benchmark import FIRST_SEED
 from enhance.train import fit, recipe, score
-from enhance.train.data import CROP, CROPS, INSTANTS, Shard
+from enhance.train.data import CROP, CROPS, INSTANTS, KEYS, Shard
 from enhance.write.whole import whole_file
 
 WEIGHTS = "fusion.safetensors"
@@ -139,7 +139,7 @@ def describe(
             "recordings": recordings,
             "seed": settings.seed,
             "scene_seeds": f"trained on: below {recipe.HELD_OUT_SEED}; held out: from there to {FIRST_SEED}",
-            "crops": f"{INSTANTS * CROPS} a recording, {CROP} x {CROP} pixels",
+            "crops": f"{(INSTANTS + KEYS) * CROPS} a recording, {CROP} x {CROP} pixels",
         },
         "training": {
             "steps": training.step,

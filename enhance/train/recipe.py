@@ -209,9 +209,10 @@ def draw_recipe(seed: int, index: int, held_out: bool = False) -> tuple[Recipe, 
 
 
 def _rig_error(rng: Rng, exposure_us: float, us_per_px: float) -> RigError:
-    """Draw what a calibration would miss: thresholds read high rather than low, the clock to 2 % of the exposure."""
+    """Draw what a calibration would miss: thresholds, and the clock to 2 % of the exposure."""
     bad = rng.random() < BADLY_RIGGED
-    common = rng.uniform(0.7, 1.3) if bad else rng.uniform(0.95, 1.2)
+    # measured thresholds, over true ones, on 12 simulated recordings: 0.97 in the mean, deviation 0.08
+    common = rng.uniform(0.7, 1.3) if bad else float(np.clip(rng.normal(0.98, 0.07), 0.8, 1.2))
     # Short exposures leave the clock to its absolute error, though never by more than pixels tell.
     most = max((0.05 if bad else 0.02) * exposure_us, min(300.0, (2.0 if bad else 0.7) * us_per_px))
     return RigError(
