@@ -63,7 +63,8 @@ class Rig:
     row_time_us : Quantity
         From one row of the frames to the next, microseconds: 0 for a global shutter, negative where read upward.
     stripes : Quantity
-        Root mean square of the columns' offsets that were taken out of the frames. Of this recording alone, as the next.
+        Root mean square of the columns' offsets that were taken out of the frames. Of this recording alone, like the
+        next.
     brightness : Quantity
         Value: list of [frame, factor] where the frames' brightness steps without any event, which was taken out.
     sensor_size : tuple of int

@@ -40,8 +40,8 @@ class Camera:
     sees_lamp : bool
         Whether a flickering lamp lights the frames as well as the events.
     row_time_us : float
-        Row r is exposed ``row_time_us * r`` later than row 0, whose exposure is the frame's; negative: read upward; 0: a
-        global shutter.
+        Row r is exposed ``row_time_us * r`` later than row 0, whose exposure is the frame's; negative: read upward; 0:
+        a global shutter.
     exposure_shares, gains : tuple of float
         Of `exposure_us`, above 0 to 1, and the gain behind the sensor, frame by frame, over and over; none: all 1.
     dark : float
