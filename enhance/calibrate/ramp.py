@@ -20,8 +20,8 @@ from enhance.rig import Quantity
 #: Ramp in median intervals: on 17 simulated recordings the best lay at 1 to 4 of them, at about 2 in most.
 INTERVALS = 2.0
 #: Only intervals within an exposure are looked at, so where light takes longer their median is half an exposure
-#: whatever the scene: a ramp over this part of the exposure cannot be told, and the clock's offset takes its lag up. At half an
-#: exposure, as it stood before, three slow scenes got a clock 3 ms early, and keys 4 to 6 dB worse.
+#: whatever the scene: a ramp over this part of the exposure cannot be told, and the clock's offset takes its lag up.
+#: At half an exposure, as it stood before, three slow scenes got a clock 3 ms early, and keys 4 to 6 dB worse.
 LONGEST_SHARE = 0.9
 #: Intervals a median needs, and pairs that are looked at.
 LEAST_INTERVALS, PAIRS = 200, 6
