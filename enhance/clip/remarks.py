@@ -35,6 +35,8 @@ def rig_remarks(rig: Rig) -> list[str]:
 
 def _lamp(rig: Rig) -> str:
     depth = "" if rig.flicker_depth.value is None else f", depth of modulation {rig.flicker_depth.value:.2f}"
+    if rig.offset_us.value is None:
+        return f"a lamp flickers at {rig.flicker_hz.value:.2f} Hz; frames that beat with it stay as they are"
     seen = rig.flicker_in_frames
     frames = "frames were brought to steady light" if seen.value else "the frames do not show it and stay as they are"
     why = f" ({seen.evidence})" if seen.evidence else ""
