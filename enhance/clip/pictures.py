@@ -79,8 +79,9 @@ class Pictures:
         sides = moved_sides(left, right, there, back, w)
         image = (1 - w) * sides[0] + w * sides[1]
         error = None
-        if self.keys.trust is not None:
-            light, rig = self.keys.frames.light, self.keys.rig
+        light, rig = self.keys.frames.light, self.keys.rig
+        # Without a clock the frames' noise is not known either, and nothing can be expected.
+        if self.keys.trust is not None and rig.frame_noise.value is not None:
             maps = frame_cause_maps(np.stack([luma(side) for side in sides]), there, luma(image), light, rig)
             error = self.keys.trust.kinds["inserted by frames"].error_map(maps)
         return Picture(image, time_us, Kind.INSERTED, By.FRAMES, error)
