@@ -63,7 +63,7 @@ def search(
     shrink = SIDE / max(width, height)
     target = _Target(frames, shrink)
     found: list[Guess] = []
-    for pitch in pitches or _steps():
+    for pitch in _steps() if pitches is None else pitches:
         blurred = [blur(each, max(0.5, 0.8 / (pitch * shrink))) for each in events]
         for turn in _turns():
             found.append(target.best(blurred, turn * pitch))
