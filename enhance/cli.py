@@ -179,7 +179,7 @@ def _add_simulate(parser: argparse.ArgumentParser) -> None:
 def _add_train(parser: argparse.ArgumentParser) -> None:
     parser.add_argument("folder", type=Path, metavar="FOLDER", help="where the state and the weights go")
     parser.add_argument("--minutes", type=_positive, default=30.0, help="how long to train (default: 30)")
-    parser.add_argument("--recordings", type=_whole(1), default=60, help="how many to render (default: 60)")
+    parser.add_argument("--recordings", type=_whole(2), default=60, help="how many to render (default: 60)")
     parser.add_argument("--seed", type=_whole(0), default=1, help="of the recordings and the weights (default: 1)")
     parser.add_argument("--resume", action="store_true", help="take up the training that stands in FOLDER")
     parser.add_argument("--ablations", type=_positive, default=0.0, metavar="MINUTES",
@@ -319,7 +319,7 @@ def _train(arguments: argparse.Namespace) -> int:
     progress = _Progress()
     path = train.run(arguments.folder, progress=lambda *step: progress(arguments.folder, *step), **asked)
     progress.close()
-    _say(f"The weights and what is known of them stand in {path.parent}: {path.name}, {path.stem}.md.")
+    _say(f"The weights stand in {path}, what is known of them beside it.")
     return 0
 
 

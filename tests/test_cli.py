@@ -236,11 +236,22 @@ def test_calibrate_tells_the_rig(monkeypatch, capsys) -> None:
     assert "  clock offset: -7300 us" in capsys.readouterr().out
 
 
-def test_train_hands_its_arguments_on(monkeypatch) -> None:
+def test_train_hands_its_arguments_on_and_tells_how_far_it_is(monkeypatch, capsys) -> None:
     asked = {}
-    monkeypatch.setattr("enhance.train.run", lambda folder, **rest: asked.update(rest, folder=folder), raising=False)
-    assert exit_code_of("train", "weights", "--minutes", "1.5", "--recordings", "3", "--seed", "7", "--resume") == 0
-    assert asked == {"folder": Path("weights"), "minutes": 1.5, "recordings": 3, "seed": 7, "resume": True}
+
+    def run(folder, *, progress, **rest):
+        asked.update(rest, folder=folder)
+        progress(1, 3, "rendering recordings")
+        return folder / "fusion.safetensors"
+
+    monkeypatch.setattr("enhance.train.run", run)
+    argv = ["--minutes", "1.5", "--recordings", "3", "--seed", "7", "--resume", "--ablations", "0.5", "--trust", "9"]
+    assert exit_code_of("train", "weights", *argv) == 0
+    numbers = {"minutes": 1.5, "recordings": 3, "seed": 7, "resume": True, "ablations": 0.5, "trust": 9}
+    assert asked == {"folder": Path("weights"), **numbers}
+    told = capsys.readouterr()
+    assert "weights/fusion.safetensors" in told.out
+    assert "rendering recordings: 1 of 3" in told.err
 
 
 def test_the_kinds_of_scene_are_those_of_the_simulator() -> None:

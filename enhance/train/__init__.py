@@ -58,7 +58,7 @@ def run(
     minutes : float
         How long to train, about; a training taken up again goes to the end planned at first.
     recordings : int
-        How many to render.
+        How many to render, at least two.
     seed : int
         Of the recordings and the weights.
     resume : bool
@@ -101,7 +101,7 @@ def run(
             f"{folder}: this training was begun with seed {training.settings.seed}, not {seed}; "
             f"give --seed {training.settings.seed}, or begin anew in another folder"
         )
-    first = round(recordings * FIRST_RECORDINGS)
+    first = min(max(1, round(recordings * FIRST_RECORDINGS)), recordings - 1)
     made = partial(_made, seed, processes, progress)
     crops, held_out = made(folder / "recordings", range(first))
     if training is None:

@@ -138,20 +138,20 @@ def test_a_run_leaves_loadable_weights_with_their_card(tmp_path: Path, monkeypat
     monkeypatch.setattr(train, "_steps_within", lambda seconds, crops: 2)
     told: list[tuple[int, int, str]] = []
     path = train.run(
-        tmp_path, minutes=0.01, recordings=1, seed=4, resume=False, processes=1, progress=lambda *a: told.append(a)
+        tmp_path, minutes=0.01, recordings=2, seed=4, resume=False, processes=1, progress=lambda *a: told.append(a)
     )
     load_network(path)
     card = json.loads(path.with_suffix(".json").read_text())
     assert card["architecture"]["macs_per_pixel"] <= 20_000
     assert card["architecture"]["parameters"] <= 300_000
     assert card["training"]["steps"] == 2
-    assert card["command"] == "enhance train FOLDER --minutes 0.01 --recordings 1 --seed 4"
+    assert card["command"] == "enhance train FOLDER --minutes 0.01 --recordings 2 --seed 4"
     assert card["sha256"] in path.with_suffix(".md").read_text()
     assert told[-1][:2] == (2, 2)
     with pytest.raises(JobError, match="a training stands here already; take it up with --resume"):
-        train.run(tmp_path, minutes=1, recordings=1, seed=4, resume=False)
+        train.run(tmp_path, minutes=1, recordings=2, seed=4, resume=False)
     with pytest.raises(JobError, match="begun with seed 4, not 9; give --seed 4"):
-        train.run(tmp_path, minutes=1, recordings=1, seed=9, resume=True)
+        train.run(tmp_path, minutes=1, recordings=2, seed=9, resume=True)
 
 
 def test_nothing_to_take_up_is_said(tmp_path: Path) -> None:
