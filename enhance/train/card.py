@@ -36,7 +36,7 @@ DATA = (
 LIMITS = (
     "Fitted on simulated recordings alone; figures on real ones must be measured there, with held-out frames.",
     "It mixes candidates: what none of them shows, it cannot show. Its residual is bounded to "
-    f"{RESIDUAL:g} of full scale.",
+    f"{RESIDUAL:g} of full scale, half of what it was fitted with.",
     "Light that flickers, rolling shutters, sensors that do not share one view pixel by pixel: not trained on.",
     "Luma alone is fused; colour rides along with the warps.",
     "Held-out recordings choose which round's weights are kept, so their figures are a little flattering; the "

@@ -100,7 +100,7 @@ class Training:
         torch.manual_seed(settings.seed)
         network, average = FusionNetwork(), FusionNetwork()
         average.load_state_dict(network.state_dict())
-        return cls(settings, network, average.requires_grad_(False), _optimizer(network))
+        return cls(settings, network, average.requires_grad_(False).eval(), _optimizer(network))
 
 
 def _optimizer(network: FusionNetwork) -> torch.optim.AdamW:
