@@ -14,7 +14,9 @@ from enhance import clip
 from enhance.settings import ClipSettings, EventsSettings, FramesSettings, OutputSettings
 
 SIMPLE = {2: 28.0, 4: 27.1, 8: 26.5}
-TARGET = {2: 28.5, 4: 28.0, 8: 27.0}
+#: What is held; 30.0, 29.5 and 29.0 are aimed at. Keys moved by the flow from the held-out frame itself, which no tool
+#: has, read 30.4 at every 2nd frame.
+TARGET = {2: 29.4, 4: 28.8, 8: 28.6}
 
 
 def figures(recordings: Path, out: Path, every: int, network: str) -> dict[str, float]:
@@ -28,8 +30,9 @@ def figures(recordings: Path, out: Path, every: int, network: str) -> dict[str, 
         network=network,
     )
     clip.run(settings, lambda done, total, what: None)
-    summary = json.loads((out / "quality.json").read_text())
-    return {name: figure["mean"] for name, figure in summary["held_out"]["figures"].items()}
+    held_out = json.loads((out / "quality.json").read_text())["held_out"]
+    ranked = {"ranked": held_out["rank_correlation"]["psnr_moving"]}
+    return {name: figure["mean"] for name, figure in held_out["figures"].items()} | ranked
 
 
 def test_every_2nd_frame_is_found_again_better_than_by_any_simple_method(recordings: Path, tmp_path: Path) -> None:
@@ -44,7 +47,7 @@ def test_every_2nd_frame_is_found_again_better_than_by_any_simple_method(recordi
 def test_figures_at_every_gap(recordings: Path, tmp_path: Path, every: int, network: str, capsys) -> None:
     found = figures(recordings, tmp_path, every, network)
     with capsys.disabled():
-        names = ("psnr_moving", "nearest_moving", "blend_moving", "flow_moving", "psnr", "ceiling")
+        names = ("psnr_moving", "nearest_moving", "blend_moving", "flow_moving", "psnr", "ceiling", "ranked")
         print(f"\nstreet, every {every}., network {network}: " + ", ".join(f"{n} {found[n]:.2f}" for n in names))
     if network == "fusion":
         assert found["psnr_moving"] >= TARGET[every]
