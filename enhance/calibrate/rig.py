@@ -48,23 +48,7 @@ UNKNOWN = Quantity(None, None, "not measured", "")
 def calibrate(recording: Recording, keys: Sequence[int], settings: RigSettings) -> Rig:
     """Work out how the two sensors of a recording relate whose pixels lie on each other.
 
-    Parameters
-    ----------
-    recording : Recording
-    keys : sequence of int
-        Indices of the frames that may be looked at; held-out ones are not among them.
-    settings : RigSettings
-        What is given; the rest is read from its file or estimated.
-
-    Returns
-    -------
-    Rig
-        A clock that cannot be told has the value None where ``settings.unknown`` is ``frames``.
-
-    Raises
-    ------
-    CalibrationError
-        If the clock or the thresholds cannot be told, or the rig file does not fit.
+    Parameters, result and errors are those of `enhance.calibrate.registered.calibrate`, which brings the two there.
     """
     rig = known_rig(recording, settings)
     if rig.flicker_hz.value is None:
