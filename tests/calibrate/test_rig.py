@@ -129,7 +129,8 @@ def test_frames_that_the_sensor_did_not_see_spoil_neither_clock_nor_noise(simula
     rig = calibrate(part, range(len(recording.frames)), RigSettings())
     floor, shot = rig.frame_noise.value
     assert floor**2 + 0.3 * shot < 1.5 * ((5 / 20_000) ** 2 + (1 / 255) ** 2 / 12 + 0.3 / 20_000)
-    assert abs(rig.offset_us.value + 5_300) < 2 * rig.offset_us.uncertainty
+    # 150 before the clock had its own model of events; 168 is left
+    assert abs(rig.offset_us.value + 5_300) < min(170, 2 * rig.offset_us.uncertainty)
 
 
 def test_the_real_recording_is_told_within_what_was_measured_on_it(recordings):

@@ -18,8 +18,8 @@ pytestmark = pytest.mark.slow
 SIZE, RATE_HZ, EXPOSURE_US, FRAMES, FACTOR, SPANS = (160, 120), 30.0, 15_000, 9, 8, (1, 4, 6)
 #: Kind of scene, seed, and the readout's share of the frame interval; negative: upward.
 RECORDINGS = (("texture", 5, 0.6), ("parts", 6, 0.8), ("label", 7, -0.5), ("fluid", 8, 0.3), ("fan", 9, -0.6))
-#: Decibels lost in the mean over the recordings, and in any one of them.
-TARGET_DB, MOST_DB = 0.7, 1.0
+#: Decibels lost at the most, in any of the recordings.
+TARGET_DB = 0.7
 
 
 def psnr(truth: np.ndarray, picture: np.ndarray) -> float:
@@ -70,5 +70,4 @@ def test_pictures_of_a_rolling_shutter_are_as_good_as_of_a_global_one(capsys: py
         assert abs(row_time / true - 1) < 0.05
     with capsys.disabled():
         print(f"\nlost in the mean {np.mean(lost):.2f} dB, at the most {max(lost):.2f} dB")
-    assert np.mean(lost) <= TARGET_DB
-    assert max(lost) <= MOST_DB
+    assert max(lost) <= TARGET_DB

@@ -12,6 +12,8 @@ from enhance.shipped import shipped_folder
 from enhance.train.data import make_shard
 from enhance.train.score import SCORED, mean_over_groups, score
 
+#: By how much these weights fall short of the analytic blend on cloth, inserted pictures; they gain on all other kinds.
+SHORT = 0.1
 PATH = shipped_folder("models") / "fusion.safetensors"
 
 
@@ -32,14 +34,15 @@ def test_the_card_tells_the_size_of_the_network_that_is_run(network: FusionNetwo
     assert PATH.stat().st_size <= 2_000_000
 
 
-def test_the_card_tells_a_gain_in_the_mean_and_no_loss_on_any_kind_of_scene(card: dict) -> None:
+def test_the_card_tells_a_gain_over_the_blend_on_every_kind_of_scene_but_one(card: dict) -> None:
     held_out = card["held_out"]
     assert len(held_out["by_kind"]) == len(held_out["keys_by_kind"]) == 12
     for row in (*held_out["by_model"].values(), held_out["mean"], held_out["keys_mean"]):
         assert row["network"] > row["start"]
-    for row in (*held_out["by_kind"].values(), *held_out["keys_by_kind"].values()):
-        assert set(SCORED) <= set(row)
-        assert row["network"] > row["start"] - 0.2
+    for table, short in ((held_out["by_kind"], {"cloth": SHORT}), (held_out["keys_by_kind"], {})):
+        for kind, row in table.items():
+            assert set(SCORED) <= set(row)
+            assert row["network"] > row["start"] - short.get(kind, 0.0)
 
 
 def test_the_readable_card_is_of_the_same_weights(card: dict) -> None:
