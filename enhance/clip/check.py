@@ -92,11 +92,12 @@ def _look(recording: Recording, settings: ClipSettings) -> Findings:
         warnings.append("no clip ([slow_motion] is left out) and no stills are asked for: only the tables are made")
     if settings.hold_out >= len(frames):
         warnings.append(f"measure.hold_out = {settings.hold_out} leaves no frame between keys: no figures are made")
-    if settings.network != "off" and not mistakes:
-        from enhance.clip.passes import load_fusion
+    if not mistakes:
+        from enhance.clip.passes import load_fusion, load_shipped_trust
 
         try:
             load_fusion(settings)
+            load_shipped_trust()
         except EnhanceError as error:
             mistakes.append(str(error))
     pictures = len(plan.pictures)

@@ -311,3 +311,9 @@ def test_a_white_far_too_low_is_told(settings: ClipSettings) -> None:
     assert any("lie above frames.white = 60" in note for note in run(wrong).notes)
     assert any("lie above frames.white = 60" in warning for warning in clip.check(wrong).warnings)
     assert not any("frames.white" in warning for warning in clip.check(settings).warnings)
+
+
+def test_a_missing_trust_file_is_told_before_any_work(settings: ClipSettings, tmp_path: Path, monkeypatch) -> None:
+    monkeypatch.setattr("enhance.clip.passes.shipped_folder", lambda name: tmp_path)
+    found = clip.check(settings)
+    assert any("trust.json: what trust in pictures rests on cannot be read" in each for each in found.mistakes)
